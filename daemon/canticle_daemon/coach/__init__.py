@@ -1,0 +1,1 @@
+"""Pure coaching: what an event is worth saying, and when."""

@@ -1,0 +1,1 @@
+"""Everything that touches a socket, a clock, a file or a process."""

@@ -1,0 +1,1 @@
+"""Pure block filters; `pipeline` tells the story."""

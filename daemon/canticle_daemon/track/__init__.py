@@ -1,0 +1,1 @@
+"""The track: its file, and what is asked of it on every frame."""

@@ -1,0 +1,1 @@
+"""What the driver sees and hears: the overlay window and the voice, each its own process."""
