@@ -12,7 +12,7 @@ from typing import Any, Literal, TypeAlias
 
 import msgspec
 
-from canticle_daemon.frame import Frame, Wheels
+from canticle_daemon.frame import NAN, Frame, Wheels
 
 Verdict: TypeAlias = Literal["early", "on", "late", "not judged"]
 Phase: TypeAlias = Literal["before", "in", "after"]
@@ -222,6 +222,12 @@ class Status(msgspec.Struct):
     overlay: str
 
 
+class Vocabulary(msgspec.Struct):
+    """Every phrase the coach can say, for the voice to render ahead; repeated every second."""
+
+    phrases: tuple[str, ...]
+
+
 @dataclass(frozen=True, slots=True)
 class Topic:
     """One stream on the bus: `rate_hz` is its nominal rate, 0 for as it happens."""
@@ -239,6 +245,7 @@ TOPICS: dict[str, Topic] = {
         Topic("estimate", Estimate, 60.0, in_log=False),
         Topic("track", TrackView, 1.0, in_log=False),
         Topic("status", Status, 1.0, in_log=False),
+        Topic("vocabulary", Vocabulary, 1.0, in_log=False),
         *(
             Topic(str(event.__struct_config__.tag), event, 0.0, in_log=True)
             for event in (
@@ -279,6 +286,8 @@ def bus_message(topic: str, payload: bytes) -> bytes:
 def read_bus_message(message: bytes) -> tuple[str, Any]:
     """Take a bus message apart into its topic and its payload object.
 
+    A null stands for a number that could not be computed and reads as NaN again.
+
     Raises
     ------
     msgspec.MsgspecError
@@ -288,4 +297,21 @@ def read_bus_message(message: bytes) -> tuple[str, Any]:
     """
     topic, _, payload = message.partition(b" ")
     name = topic.decode()
-    return name, _decoders[name].decode(payload)
+    decoder = _decoders[name]
+    try:
+        return name, decoder.decode(payload)
+    except msgspec.ValidationError:
+        data = msgspec.json.decode(payload)
+        return name, msgspec.convert(_null_as_nan(data, TOPICS[name].payload), decoder.type)
+
+
+def _null_as_nan(data: Any, payload: type[Any]) -> Any:
+    if not isinstance(data, dict):
+        return data
+    for field in msgspec.structs.fields(payload):
+        value = data.get(field.encode_name)
+        if field.type is float and value is None and field.encode_name in data:
+            data[field.encode_name] = NAN
+        elif field.type == Wheels and isinstance(value, list):
+            data[field.encode_name] = [NAN if item is None else item for item in value]
+    return data
