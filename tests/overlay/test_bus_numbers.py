@@ -4,6 +4,7 @@ import math
 
 import msgspec
 import pytest
+
 from canticle_daemon.messages import Estimate, Vocabulary, bus_message, encode, read_bus_message
 
 NAN = float("nan")
