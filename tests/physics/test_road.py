@@ -9,6 +9,7 @@ Streets*, minimum-radius table (limiting side friction from memory, radii comput
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 import pytest
@@ -17,6 +18,8 @@ from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 
 from canticle_daemon.physics import road
+
+Motion = Callable[[np.ndarray], np.ndarray]
 
 OPENSTAX_GRAVITY = 9.80
 KMH = 1.0 / 3.6
@@ -263,7 +266,7 @@ def test_which_bank_estimate_is_better_conditioned() -> None:
         rate = yaw_rate + d_turn / speed
         plain = road.bank_from_side_force(side + d_side, speed, rate)
         both = road.bank_from_specific_force(side + d_side, normal + d_normal, speed, rate)
-        return tuple(float(np.degrees(x - roll)[0]) for x in (plain, both))  # type: ignore[return-value]
+        return float(np.degrees(plain - roll)[0]), float(np.degrees(both - roll)[0])
 
     assert error_deg(0.1, 0.0, 0.0) == pytest.approx((0.62, 0.31), abs=0.01)
     assert error_deg(0.0, 0.0, 0.1) == pytest.approx((-0.62, -0.23), abs=0.01)
@@ -422,13 +425,13 @@ def _cubic(grid: np.ndarray, values: np.ndarray, at: np.ndarray) -> np.ndarray:
     )
 
 
-def _first(function, time: np.ndarray, step: float = 4e-3) -> np.ndarray:  # type: ignore[no-untyped-def]
+def _first(function: Motion, time: np.ndarray, step: float = 4e-3) -> np.ndarray:
     near = function(time + step) - function(time - step)
     far = function(time + 2 * step) - function(time - 2 * step)
     return (8.0 * near - far) / (12.0 * step)
 
 
-def _second(function, time: np.ndarray, step: float = 4e-3) -> np.ndarray:  # type: ignore[no-untyped-def]
+def _second(function: Motion, time: np.ndarray, step: float = 4e-3) -> np.ndarray:
     near = function(time + step) + function(time - step)
     far = function(time + 2 * step) + function(time - 2 * step)
     return (16.0 * near - far - 30.0 * function(time)) / (12.0 * step * step)
@@ -446,7 +449,7 @@ ENTRIES = {
 def test_specific_forces_against_differences_of_a_path(entry: str) -> None:
     # The formulas neglect the square of the angle between path and spine, here up to 5°: that
     # is worth under 0.07 m/s² of 6 to 18.
-    car = BankedEntry(**ENTRIES[entry])  # type: ignore[arg-type]
+    car = BankedEntry(**ENTRIES[entry])
     side, normal = car.felt()
     arguments = car.arguments()
     assert_allclose(road.normal_specific_force(*arguments), normal, atol=0.07)
@@ -457,7 +460,7 @@ def test_specific_forces_against_differences_of_a_path(entry: str) -> None:
 def test_specific_forces_are_exact_in_the_section_across_the_spine(entry: str) -> None:
     # With the horizontal acceleration taken across the spine in place of across the path,
     # nothing is neglected.
-    car = BankedEntry(**ENTRIES[entry])  # type: ignore[arg-type]
+    car = BankedEntry(**ENTRIES[entry])
     heading, roll = car.heading(car.time_s), car.roll(car.time_s)
     level, upright = np.zeros_like(heading), np.ones_like(heading)
     plan_left = np.stack([-np.sin(heading), np.cos(heading), level])
@@ -475,7 +478,7 @@ def test_specific_forces_are_exact_in_the_section_across_the_spine(entry: str) -
 def test_the_steady_formula_fails_in_the_transition(entry: str) -> None:
     # Why the long expression is there: without the surface's rise a meter per second squared and
     # more goes missing, in different places for early and late entries.
-    car = BankedEntry(**ENTRIES[entry])  # type: ignore[arg-type]
+    car = BankedEntry(**ENTRIES[entry])
     roll, speed, turning = car.arguments()[0], *car.arguments()[6:8]
     steady_normal = np.cos(roll) * 9.81 - np.sin(roll) * speed * turning
     assert np.max(np.abs(steady_normal - car.felt()[1])) > 1.2
