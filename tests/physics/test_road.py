@@ -512,6 +512,48 @@ def test_common_practice_on_a_large_steep_oval() -> None:
     assert straight == pytest.approx(1.0, abs=0.01)
 
 
+def test_downforce_adds_to_the_normal_force() -> None:
+    # 1,500 kg, 70 m/s, 280 m, 24°, 4,501.875 N: normal 28,621.5333 N, side 17,995.4386 N, demand
+    # 0.628737754, without downforce 0.746090112 (computed).
+    motion = (math.radians(-24.0), 0, 0, 0, 0, 0, 70.0, 70.0 / 280.0)
+    side = 1500.0 * float(road.lateral_specific_force(*motion))
+    normal = 1500.0 * float(road.normal_specific_force(*motion)) + 4501.875
+    assert (normal, side) == pytest.approx((28_621.5333, 17_995.4386), abs=1e-3)
+    assert side / normal == pytest.approx(0.628737754, abs=1e-9)
+    bare = road.side_demand_steady(70.0, 1 / 280.0, math.radians(24.0))
+    assert bare == pytest.approx(0.746090112, abs=1e-9)
+
+
+def test_one_row_of_a_published_racing_line() -> None:
+    # −20°, 33.898472 m/s² in the road's plane: 30.543087 aside and 21.557055 along the normal
+    # (computed from the row of an open 3-D racing line data set; the roll is rounded).
+    roll = math.radians(-20.0)
+    motion = (roll, 0, 0, 0, 0, 0, 1.0, 33.898472 / math.cos(roll))
+    assert road.lateral_specific_force(*motion) == pytest.approx(30.543087, abs=1e-3)
+    assert road.normal_specific_force(*motion) == pytest.approx(21.557055, abs=1e-3)
+
+
+def test_any_cut_of_a_series_gives_the_same_bits() -> None:
+    rng = np.random.default_rng(11)
+    side, normal, speed, turn = rng.uniform(
+        [[5], [8], [20], [-0.4]], [[25], [25], [90], [0.4]], (4, 61)
+    )
+    parts = [
+        (road.bank_from_specific_force, (side, normal, speed, turn)),
+        (road.bank_from_side_force, (side, speed, turn)),
+        (road.side_demand_steady, (speed, turn / speed, turn)),
+        (road.normal_specific_force, (turn, turn, side, normal, side, normal, speed, turn)),
+    ]
+    for function, columns in parts:
+        whole = function(*columns)
+        for size in (1, 2, 3, 7, 16):
+            cut = [
+                function(*(column[start : start + size].copy() for column in columns))
+                for start in range(0, 61, size)
+            ]
+            assert np.array_equal(np.concatenate(cut), whole), function.__name__
+
+
 def test_nan_in_nan_out() -> None:
     nan = math.nan
     assert np.isnan(road.neutral_speed_mps(nan, 0.3))

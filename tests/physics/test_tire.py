@@ -127,6 +127,18 @@ def test_utilization_is_held_and_survives_no_load() -> None:
     assert_allclose(power[4:], 0.0)
 
 
+def test_any_cut_of_a_series_gives_the_same_bits() -> None:
+    rng = np.random.default_rng(12)
+    force, load, speed = rng.uniform(0.0, [[6000.0], [6000.0], [90.0]], (3, 61))
+    whole = brush.sliding_power_w(force, load, speed, PLAIN)
+    for size in (1, 2, 3, 7, 16):
+        cut = [
+            brush.sliding_power_w(*(c[i : i + size].copy() for c in (force, load, speed)), PLAIN)
+            for i in range(0, 61, size)
+        ]
+        assert np.array_equal(np.concatenate(cut), whole)
+
+
 def test_nan_in_nan_out() -> None:
     nan = math.nan
     assert np.isnan(brush.peak_friction(PLAIN, nan))

@@ -78,14 +78,17 @@ def wheel_loads(
     Returns
     -------
     array, shape (4, n)
-        Loads of front left, front right, rear left, rear right, never negative. A wheel that
-        would lift carries nothing and the other wheel of its axle carries the axle.
+        Loads of front left, front right, rear left, rear right, never negative; they add up to
+        the normal force. A wheel that would lift carries nothing and the other wheel of its
+        axle carries the axle; an axle that would lift leaves the car to the other.
     """
     height = car.cg_height_m
     body_n = normal_n - downforce_front_n - downforce_rear_n
     shift_n = forward_n * height / car.wheelbase_m
+    whole_n = np.maximum(normal_n, 0.0)
     front_n = car.front_weight_share * body_n + downforce_front_n - shift_n
-    rear_n = normal_n - front_n
+    front_n = np.clip(front_n, 0.0, whole_n)
+    rear_n = whole_n - front_n
     moment_nm = side_n * height
     front_share = car.roll_stiffness_front_share
     front_transfer_n = front_share * moment_nm / car.track_front_m
@@ -93,16 +96,9 @@ def wheel_loads(
     left = car.left_weight_share - 0.5
     front_left = front_n * 0.5 + left * (front_n - downforce_front_n) - front_transfer_n
     rear_left = rear_n * 0.5 + left * (rear_n - downforce_rear_n) - rear_transfer_n
-    front_left = np.clip(front_left, 0.0, np.maximum(front_n, 0.0))
-    rear_left = np.clip(rear_left, 0.0, np.maximum(rear_n, 0.0))
-    return np.stack(
-        [
-            front_left,
-            np.maximum(front_n - front_left, 0.0),
-            rear_left,
-            np.maximum(rear_n - rear_left, 0.0),
-        ]
-    )
+    front_left = np.clip(front_left, 0.0, front_n)
+    rear_left = np.clip(rear_left, 0.0, rear_n)
+    return np.stack([front_left, front_n - front_left, rear_left, rear_n - rear_left])
 
 
 def axle_side_forces(
