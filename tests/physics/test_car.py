@@ -163,6 +163,10 @@ def test_mirrored_car(normal: float, side: float, forward: float) -> None:
     assert_allclose(left, right[[1, 0, 3, 2]], atol=1e-6 * normal)
 
 
+def test_a_car_file_may_be_absent() -> None:
+    assert CarFile.load(None) == CarFile()
+
+
 def test_nan_in_nan_out() -> None:
     assert np.isnan(loads(CAR, math.nan, 0.0, 0.0, 0.0, 0.0)).all()
     assert np.isnan(loads(CAR, 15_000.0, math.nan, 0.0, 0.0, 0.0)).all()

@@ -236,6 +236,11 @@ def test_no_hinge(count: int, first: float | None, last: float | None) -> None:
     assert math.isnan(hinge_fit(x, x**2, first, last).knot)
 
 
+@pytest.mark.parametrize("drift", [False, True])
+def test_no_hinge_at_a_standstill(drift: bool) -> None:
+    assert math.isnan(hinge_fit(np.full(30, 7.0), np.arange(30.0), level_slope=drift).knot)
+
+
 def test_no_hinge_on_a_level() -> None:
     x = np.arange(30.0)
     hinge = hinge_fit(x, np.full(30, 3.0))

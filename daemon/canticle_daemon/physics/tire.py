@@ -126,10 +126,7 @@ def utilization(force_n: Values, load_n: Values, tire: TireFile) -> FloatArray:
     array
         |force| / (peak friction × load), held at `MAX_UTILIZATION`.
     """
-    grip_n = peak_friction(tire, load_n) * load_n
-    share: FloatArray = np.abs(force_n) / np.maximum(grip_n, _LEAST_GRIP_N)
-    held: FloatArray = np.minimum(share, MAX_UTILIZATION)
-    return held
+    return _used_share(force_n, peak_friction(tire, load_n) * load_n)
 
 
 def sliding_power_w(
@@ -159,8 +156,8 @@ def sliding_power_w(
     millimeters of tread (A. Schallamach, D. M. Turner, Wear 3:1-25, 1960, give the square law
     of its small-force end; from memory).
     """
-    used = utilization(force_n, load_n, tire)
     friction = peak_friction(tire, load_n)
+    used = _used_share(force_n, friction * load_n)
     tangent = slip_tangent(used, friction, tire.cornering_stiffness_per_load)
     loaded = np.asarray(load_n) > 0.0
     power: FloatArray = np.abs(force_n) * speed_mps * tangent * loaded
@@ -196,3 +193,9 @@ def _slip_share(utilization: Values) -> FloatArray:
     """1 − (1 − u)^⅓, written so that it keeps its digits where u is small."""
     share: FloatArray = -np.expm1(np.log1p(-np.asarray(utilization)) / 3.0)
     return share
+
+
+def _used_share(force_n: Values, grip_n: Values) -> FloatArray:
+    share: FloatArray = np.abs(force_n) / np.maximum(grip_n, _LEAST_GRIP_N)
+    held: FloatArray = np.minimum(share, MAX_UTILIZATION)
+    return held

@@ -209,7 +209,7 @@ def hinge_fit(
     if not usable.all():
         x, y = x[usable], y[usable]
         weights = None if weights is None else weights[usable]
-    if x.size < _LEAST_SAMPLES:
+    if x.size < _LEAST_SAMPLES or not x[0] < x[-1]:
         return _NO_HINGE
     weight = np.ones_like(x) if weights is None else weights
     profile = _HingeProfile(x, y, weight, level_slope)
