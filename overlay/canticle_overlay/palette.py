@@ -16,6 +16,7 @@ SKY_BLUE: Color = (86, 180, 233, 255)
 ORANGE: Color = (230, 159, 0, 255)
 PALE: Color = (214, 236, 249, 255)
 DIM: Color = (66, 122, 156, 255)
+HATCH: Color = (110, 166, 198, 255)
 GROUND: Color = (28, 58, 78, 255)
 """A fill behind other shapes; the line on its edge is what must be seen."""
 RULE: Color = (40, 56, 70, 255)

@@ -12,7 +12,18 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Literal, TypeAlias
 
-from canticle_overlay.palette import DIM, GROUND, ORANGE, PALE, PANEL, RULE, SKY_BLUE, Color, mix
+from canticle_overlay.palette import (
+    DIM,
+    GROUND,
+    HATCH,
+    ORANGE,
+    PALE,
+    PANEL,
+    RULE,
+    SKY_BLUE,
+    Color,
+    mix,
+)
 from canticle_overlay.state import Condition, Pass, Ribbon, Scene
 
 Point: TypeAlias = tuple[int, int]
@@ -30,8 +41,9 @@ BANK_SHARE = 0.62
 """Of the plot's height: the steepest bank."""
 DEMAND_TOP = 1.2
 COLUMN_TOP = 1.15
-HATCH_PX = 8
-PINS = ((34, 3, 0.0), (28, 2, 0.22), (24, 2, 0.34), (20, 2, 0.44), (16, 2, 0.52))
+HATCH_PX = 7
+SCALE_BAR_M = 50
+PINS = ((34, 3, 0.0), (28, 2, 0.2), (24, 2, 0.3), (20, 2, 0.4), (16, 2, 0.48))
 """By age, newest first: height, width, share of the panel's color mixed into the accent."""
 WHEELS = ("LF", "RF", "LR", "RR")
 CONDITION_TEXT: dict[Condition, str] = {
@@ -144,11 +156,12 @@ def result_text(done: Pass) -> str:
     done
         The entry.
     """
-    peak = "" if done.peak_demand is None else f"  ·  peak demand {done.peak_demand:.2f}"
+    peak = "" if done.peak_demand is None else f", peak demand {done.peak_demand:.2f}"
     if done.margin_m is None or done.verdict == "not judged":
         return f"not judged{peak}"
     if done.verdict == "on":
-        return f"on the mark ({done.margin_m:+.0f} m){peak}"
+        side = "before" if done.margin_m > 0 else "after"
+        return f"in the window, {abs(done.margin_m):.0f} m {side} the mark{peak}"
     return f"{abs(done.margin_m):.0f} m {done.verdict}{peak}"
 
 
@@ -168,7 +181,11 @@ class _Plot:
         distance_m = self._distance(station_m)
         if distance_m > self._span_m:
             return None
-        return RIBBON[0] + round(distance_m / self._span_m * RIBBON[2])
+        return RIBBON[0] + self.pixels(distance_m)
+
+    def pixels(self, distance_m: float) -> int:
+        """Return how many pixels a distance takes."""
+        return round(distance_m / self._span_m * RIBBON[2])
 
     def near(self, station_m: float) -> int:
         """Return the pixel of a station, of the nearer end when it is outside."""
@@ -182,7 +199,7 @@ class _Plot:
     def ground(self) -> list[Point]:
         """Return the ground line from left to right."""
         return [
-            (RIBBON[0] + round(distance_m / self._span_m * RIBBON[2]), self._bank_y(bank))
+            (RIBBON[0] + self.pixels(distance_m), self._bank_y(bank))
             for distance_m, bank in self._bank
         ]
 
@@ -220,6 +237,7 @@ def _ribbon(ribbon: Ribbon | None) -> Iterator[Shape]:
     yield from _demand(ribbon, plot)
     yield from _mark(ribbon, plot)
     yield from _pins(ribbon, plot)
+    yield from _scale_bar(plot)
     steepest = max(ribbon.corner.profile, key=lambda point: point[1])
     yield Text(right, bottom + 4, f"{steepest[1]:.0f}° bank", PALE, SMALL_SIZE, "right")
 
@@ -232,9 +250,9 @@ def _window(ribbon: Ribbon, plot: _Plot) -> Iterator[Shape]:
     for start in range(first - (bottom - top), last, HATCH_PX):
         low, high = max(start, first), min(start + bottom - top, last)
         if high > low:
-            yield Line(((low, bottom - low + start), (high, bottom - high + start)), DIM)
+            yield Line(((low, bottom - low + start), (high, bottom - high + start)), HATCH)
     for x in (first, last):
-        yield Line(((x, top), (x, bottom)), DIM)
+        yield Line(((x, top), (x, bottom)), HATCH)
 
 
 def _mark(ribbon: Ribbon, plot: _Plot) -> Iterator[Shape]:
@@ -273,8 +291,16 @@ def _demand(ribbon: Ribbon, plot: _Plot) -> Iterator[Shape]:
         yield Text(RIBBON[0], _bottom(RIBBON) + 4, "line: demand", PALE, SMALL_SIZE)
 
 
+def _scale_bar(plot: _Plot) -> Iterator[Shape]:
+    right, y = _right(RIBBON) - 92, _bottom(RIBBON) + 12
+    width = plot.pixels(SCALE_BAR_M)
+    if width <= RIBBON[2] // 3:
+        yield Line(((right - width, y), (right, y)), SKY_BLUE, 3)
+        yield Text(right - width - 6, y - 8, f"{SCALE_BAR_M} m", PALE, SMALL_SIZE, "right")
+
+
 def _columns(scene: Scene) -> Iterator[Shape]:
-    left, top, width, height = COLUMNS
+    left, _, width, height = COLUMNS
     bottom = _bottom(COLUMNS)
     yield Text(left, 10, "Grip used", PALE, TEXT_SIZE)
     for number, (name, value) in enumerate((("front", scene.front), ("rear", scene.rear))):
@@ -288,8 +314,8 @@ def _columns(scene: Scene) -> Iterator[Shape]:
         yield Rect(x, bottom - tall, 40, tall, SKY_BLUE)
     limit = bottom - round(height / COLUMN_TOP)
     yield Line(((left - 6, limit), (left + width + 6, limit)), PALE, 2)
-    if scene.saturated:
-        yield Text(left + width // 2, top - 2, "limit", ORANGE, SMALL_SIZE, "center")
+    word, color = ("at the limit", ORANGE) if scene.saturated else ("limit", PALE)
+    yield Text(left + width + 6, limit - 16, word, color, SMALL_SIZE, "right")
 
 
 def _ledger(scene: Scene) -> Iterator[Shape]:
