@@ -265,7 +265,8 @@ class Packet(Section):
                 )
         if self.min_size > (self.size or MAX_DATAGRAM):
             raise ValueError(
-                f"packet {self.name!r}: recognize or counter lies beyond the packet's size"
+                f"packet {self.name!r}: {self.min_size} bytes are read, "
+                f"beyond its size of {self.size or MAX_DATAGRAM}"
             )
         return self
 
