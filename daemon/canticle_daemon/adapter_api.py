@@ -8,14 +8,15 @@ entry-point group ``canticle.adapters``; the built-in ones are registered the sa
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 from importlib.metadata import EntryPoint, entry_points
+from pathlib import Path
 from typing import ClassVar
 
 from pydantic import BaseModel, ConfigDict
 
-from canticle_daemon.errors import AdapterLoadError
+from canticle_daemon.errors import AdapterError, AdapterLoadError
 from canticle_daemon.frame import Frame
 
 GROUP = "canticle.adapters"
@@ -71,7 +72,19 @@ class Adapter(ABC):
         """Limits of this source the user should know, one sentence each."""
         return ()
 
-    def reset(self) -> None:
+    def read(self, path: Path) -> Iterator[bytes]:
+        """Return the datagrams in a file, for adapters whose source is one.
+
+        Raises
+        ------
+        AdapterError
+            This adapter reads no files.
+        LogFormatError
+            The file is no recording of this kind.
+        """
+        raise AdapterError(f"adapter {self.name!r} reads no files; {path} cannot be replayed")
+
+    def reset(self) -> None:  # noqa: B027 - most adapters remember nothing
         """Forget all that earlier datagrams left behind."""
 
 

@@ -2,7 +2,7 @@
 
 CanticleError
 ├── ConfigError      the user's file or option is wrong: say where, exit 2
-├── RuntimeFault     the machine refused (port, folder, process): say what, exit 1
+├── SystemFaultError     the machine refused (port, folder, process): say what, exit 1
 ├── LogFormatError   a session or recording is malformed: say where, exit 2
 └── AdapterError
     ├── AdapterLoadError   no such adapter, or it is broken: exit 2
@@ -18,7 +18,7 @@ class ConfigError(CanticleError):
     """A config, track, car or layout file, or an option, is wrong; the text names file and key."""
 
 
-class RuntimeFault(CanticleError):
+class SystemFaultError(CanticleError):
     """The system refused what was asked, for example a port that is in use."""
 
 

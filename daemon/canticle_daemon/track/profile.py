@@ -13,7 +13,9 @@ wrap at ``length_m``; differences are the shortest signed ones.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+from itertools import pairwise
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -22,6 +24,7 @@ from pydantic import AfterValidator, Field, model_validator
 from scipy.spatial import cKDTree
 
 from canticle_daemon.config import Section, load_toml
+from canticle_daemon.errors import ConfigError
 from canticle_daemon.frame import FloatArray
 from canticle_daemon.messages import CornerView, Phase, TargetSource, TrackView
 
@@ -86,7 +89,7 @@ class TrackFile(Section):
         stations = [row[0] for row in self.profile]
         if stations[0] != 0.0:
             raise ValueError(f"profile must start at station 0, not {stations[0]:g}")
-        for row, (here, following) in enumerate(zip(stations, stations[1:], strict=False)):
+        for row, (here, following) in enumerate(pairwise(stations)):
             if following <= here:
                 raise ValueError(
                     f"profile row {row + 2}: station {following:g} does not rise above {here:g}"
@@ -118,7 +121,7 @@ class TrackFile(Section):
     def _check_corner(self, corner: CornerFile) -> None:
         places = ("transition_start_m", "transition_end_m", "apex_m", "exit_m")
         ahead = 0.0
-        for earlier, later in zip(places, places[1:], strict=False):
+        for earlier, later in pairwise(places):
             step = getattr(corner, later) - getattr(corner, earlier)
             if step <= 0.0 and -step < self.length_m / 2:
                 raise ValueError(f"corner {corner.name!r}: {later} must come after {earlier}")
@@ -188,6 +191,29 @@ class Track:
     def load(cls, path: Path) -> Track:
         """Read a track file; ConfigError where it cannot be right."""
         return cls(load_toml(path, TrackFile))
+
+    def with_targets(self, targets: Mapping[str, float], where: str) -> Track:
+        """Return the same track with a coach's marks.
+
+        Raises
+        ------
+        ConfigError
+            A mark names no corner or lies off the lap; the text starts with `where`.
+        """
+        names = [corner.name for corner in self.corners]
+        for name, station in targets.items():
+            if name not in names:
+                raise ConfigError(f"{where}: no corner {name!r} (known: {', '.join(names)})")
+            if not 0.0 <= station <= self.length_m:
+                raise ConfigError(f"{where}: {name}: {station:g} is not on the lap")
+        marked = Track(self.file)
+        marked.corners = tuple(
+            replace(corner, target_m=targets[corner.name], target_source="coach", window_m=None)
+            if corner.name in targets
+            else corner
+            for corner in self.corners
+        )
+        return marked
 
     def difference_m(self, ahead: float, behind: float) -> float:
         """Return the shortest signed way from one station to another."""

@@ -1,0 +1,72 @@
+"""The options that `run`, `rehearse` and `replay` share; each wins over its config key."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated, Any
+
+import typer
+
+from canticle_daemon.config import Config, load_config
+
+ConfigOption = Annotated[Path | None, typer.Option("--config", help="Settings in TOML.")]
+BindOption = Annotated[
+    str | None, typer.Option("--bind", metavar="HOST:PORT", help="UDP port to listen on.")
+]
+AdapterOption = Annotated[
+    str | None, typer.Option("--adapter", metavar="NAME", help="Telemetry format.")
+]
+LayoutOption = Annotated[
+    Path | None, typer.Option("--layout", help="Layout file of the packed adapter.")
+]
+TrackOption = Annotated[Path | None, typer.Option("--track", help="Track file.")]
+CarOption = Annotated[Path | None, typer.Option("--car", help="Car file.")]
+TargetsOption = Annotated[Path | None, typer.Option("--targets", help="The coach's turn-in marks.")]
+RunLapsOption = Annotated[
+    int | None, typer.Option("--run-laps", help="Laps that a set of tires must last.")
+]
+VoiceOption = Annotated[bool | None, typer.Option("--voice/--no-voice", help="Spoken cues.")]
+OverlayOption = Annotated[
+    bool | None, typer.Option("--overlay/--no-overlay", help="The overlay window.")
+]
+PublishOption = Annotated[
+    str | None, typer.Option("--publish", metavar="ENDPOINT", help="ZeroMQ endpoint to publish on.")
+]
+SessionsOption = Annotated[
+    Path | None, typer.Option("--sessions", help="Parent folder of session folders.")
+]
+SessionOption = Annotated[
+    Path | None, typer.Option("--session", help="This session's own, new or empty folder.")
+]
+
+
+def settings(
+    config: Path | None,
+    *,
+    bind: str | None = None,
+    adapter: str | None = None,
+    layout: Path | None = None,
+    track: Path | None = None,
+    car: Path | None = None,
+    targets: Path | None = None,
+    run_laps: int | None = None,
+    voice: bool | None = None,
+    overlay: bool | None = None,
+    publish: str | None = None,
+    sessions: Path | None = None,
+) -> Config:
+    """Merge the config file with the options."""
+    options: dict[str, Any] = {
+        "input.bind": bind,
+        "input.adapter": adapter,
+        "input.layout": layout,
+        "track.file": track,
+        "car.file": car,
+        "coach.targets": targets,
+        "coach.run_laps": run_laps,
+        "voice.enabled": voice,
+        "overlay.enabled": overlay,
+        "bus.publish": publish,
+        "log.sessions": sessions,
+    }
+    return load_config(config, options)

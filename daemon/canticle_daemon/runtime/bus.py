@@ -1,0 +1,64 @@
+"""The bus: one ZeroMQ PUB socket for everything that is said."""
+
+from __future__ import annotations
+
+import errno
+import re
+
+import msgspec
+import zmq
+
+from canticle_daemon.errors import ConfigError
+from canticle_daemon.messages import bus_message, encode
+from canticle_daemon.runtime.udp import owner_of
+
+QUEUED_MESSAGES = 50_000
+
+
+class Bus:
+    """A bound PUB socket.
+
+    Parameters
+    ----------
+    endpoint
+        For example ``tcp://127.0.0.1:47801``; port 0 takes any free one.
+
+    Raises
+    ------
+    ConfigError
+        The endpoint is malformed or in use.
+    """
+
+    def __init__(self, endpoint: str) -> None:
+        if not re.fullmatch(r"tcp://\S+:(\d+|\*)|ipc://\S+|inproc://\S+", endpoint):
+            raise ConfigError(
+                f"bus.publish: {endpoint!r} is not an endpoint such as tcp://127.0.0.1:47801"
+            )
+        self.context = zmq.Context(io_threads=1)
+        self._socket = self.context.socket(zmq.PUB)
+        # Exit must never hang on a subscriber that does not read.
+        self._socket.setsockopt(zmq.LINGER, 200)
+        self._socket.setsockopt(zmq.SNDHWM, QUEUED_MESSAGES)
+        try:
+            self._socket.bind(re.sub(r":0$", ":*", endpoint))
+        except zmq.ZMQError as error:
+            self.close()
+            raise ConfigError(_fault(endpoint, error)) from error
+        self.endpoint = self._socket.getsockopt_string(zmq.LAST_ENDPOINT).rstrip("\0")
+
+    def publish(self, topic: str, payload: msgspec.Struct) -> None:
+        """Send one message."""
+        self._socket.send(bus_message(topic, encode(payload)), zmq.DONTWAIT)
+
+    def close(self) -> None:
+        """Let go of the port."""
+        self._socket.close()
+        self.context.term()
+
+
+def _fault(endpoint: str, error: zmq.ZMQError) -> str:
+    if error.errno == errno.EADDRINUSE or error.errno == zmq.EADDRINUSE:
+        port = re.search(r":(\d+)$", endpoint)
+        owner = owner_of(int(port[1]), "tcp") if port else ""
+        return f"bus.publish: {endpoint} is in use{owner}; close that program or choose another"
+    return f"bus.publish: {endpoint} cannot be bound: {error.strerror}"

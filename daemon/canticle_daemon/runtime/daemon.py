@@ -1,0 +1,240 @@
+"""The daemon's one loop: wait for datagrams, drain them, step, tell.
+
+Everything slow lives elsewhere: overlay and voice in their own processes, their care in
+threads. The loop wakes for the UDP socket, for an ask to end, and ten times a second to look
+after the stream's silence and the status.
+"""
+
+from __future__ import annotations
+
+import gc
+import math
+import time
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+import zmq
+
+from canticle_daemon.messages import (
+    Discontinuity,
+    Status,
+    StreamLost,
+    StreamResumed,
+    TrackView,
+    Vocabulary,
+)
+from canticle_daemon.runtime.bus import Bus
+from canticle_daemon.runtime.console import Console
+from canticle_daemon.runtime.engine import Engine, Result
+from canticle_daemon.runtime.session import EstimatePublisher, Session
+from canticle_daemon.runtime.signals import StopRequest
+from canticle_daemon.runtime.supervisor import Child
+from canticle_daemon.runtime.udp import UdpInput
+
+TICK_MS = 100
+STATUS_S = 1.0
+LOST_S = 2.0
+PAUSE_S = 0.5
+CLOSE_AFTER_S = 600.0
+QUIET_END_S = 0.4
+
+
+@dataclass(slots=True)
+class Daemon:
+    """The parts of a running daemon.
+
+    Parameters
+    ----------
+    port, bus, engine, console
+        What it listens to, speaks on, thinks with and shows.
+    open_session
+        Opens the next session.
+    session
+        The session already open, with `--session`; then it is the only one.
+    children
+        Overlay, voice, and in a rehearsal the synthetic car.
+    sender
+        That car; the daemon ends when it has.
+    track_view, vocabulary
+        Repeated on the bus every second.
+    """
+
+    port: UdpInput
+    bus: Bus
+    engine: Engine
+    console: Console
+    open_session: Callable[[], Session]
+    publisher: EstimatePublisher
+    session: Session | None
+    children: list[Child] = field(default_factory=list)
+    sender: Child | None = None
+    track_view: TrackView | None = None
+    vocabulary: Vocabulary | None = None
+    _keeps_session: bool = field(init=False)
+    _heard: float = field(init=False)
+    _moved: float = field(init=False)
+    _status_due: float = 0.0
+    _lost: bool = False
+    _paused: bool = False
+    _bad_told: tuple[int, float] = (0, -math.inf)
+    _foreign_told: int = 0
+    _newest: Result | None = None
+
+    def __post_init__(self) -> None:
+        self._keeps_session = self.session is not None
+        self._heard = self._moved = time.monotonic()
+
+    def run(self, stop: StopRequest) -> str:
+        """Serve until asked to end; return why it ended."""
+        poller = zmq.Poller()
+        poller.register(self.port.fileno(), zmq.POLLIN)
+        poller.register(stop.fileno(), zmq.POLLIN)
+        # What lives now lives for good: a full collection would cost tens of milliseconds.
+        gc.collect()
+        gc.freeze()
+        while not stop.is_set:
+            ready = dict(poller.poll(TICK_MS))
+            if self.port.fileno() in ready:
+                self._serve()
+            now = time.monotonic()
+            self._watch(now)
+            if now >= self._status_due:
+                self._status_due = now + STATUS_S
+                self._tell_status()
+            if self._sender_done(now):
+                return "the rehearsal is over"
+        return stop.reason
+
+    def _serve(self) -> None:
+        """Take in what waits in the socket."""
+        taken = self.port.drain()
+        if not taken:
+            return
+        before = self.engine.time_s
+        result = self.engine.process(
+            [datagram.data for datagram in taken], [datagram.received_ns for datagram in taken]
+        )
+        now = time.monotonic()
+        if result is None:
+            return
+        if self.session is None:
+            self.session = self.open_session()
+        self._note_flow(now, before)
+        self.session.take(result, self.publisher)
+        self._newest = result
+
+    def _note_flow(self, now: float, before: float) -> None:
+        """Tell of silence that has ended and of a clock that stands still."""
+        assert self.session is not None
+        newest = self.engine.time_s
+        silence = now - self._heard
+        self._heard = now
+        if self._lost:
+            self._lost = False
+            self.session.tell(StreamResumed(time_s=newest, silence_s=round(silence, 3)))
+            if 0.0 <= newest - before < PAUSE_S:
+                self._tell_pause(newest, silence)
+        if newest != before:
+            self._moved, self._paused = now, False
+        elif now - self._moved > PAUSE_S and not self._paused:
+            self._paused = True
+            self._tell_pause(newest, now - self._moved)
+
+    def _tell_pause(self, time_s: float, seconds: float) -> None:
+        assert self.session is not None
+        detail = f"the stream's clock stood still for {seconds:.1f} s"
+        self.session.tell(Discontinuity(time_s=time_s, reason="pause", detail=detail))
+
+    def _watch(self, now: float) -> None:
+        """Notice a silent stream, and close a session that nobody feeds."""
+        silence = now - self._heard
+        if self.session is None or self._newest is None:
+            return
+        if silence > LOST_S and not self._lost:
+            self._lost = True
+            self.session.tell(StreamLost(time_s=self.engine.time_s, silence_s=round(silence, 3)))
+        if silence > CLOSE_AFTER_S and not self._keeps_session:
+            self.session.close("ten minutes without telemetry", **self.end_facts())
+            self.session, self._newest, self._lost = None, None, False
+            self.engine.restart()
+
+    def _sender_done(self, now: float) -> bool:
+        sender = self.sender
+        if sender is None or sender.state not in ("unavailable", "closed", "failed"):
+            return False
+        return now - self._heard > QUIET_END_S or self._newest is None
+
+    def _tell_status(self) -> None:
+        status = self.status()
+        self.bus.publish("status", status)
+        if self.track_view is not None:
+            self.bus.publish("track", self.track_view)
+        if self.vocabulary is not None:
+            self.bus.publish("vocabulary", self.vocabulary)
+        self._tell_faults(status)
+        self.console.status(self._status_line(status))
+
+    def _tell_faults(self, status: Status) -> None:
+        told, _ = self._bad_told
+        if status.bad_datagrams > told:
+            count = status.bad_datagrams - told
+            self.console.line(f"{count} bad datagram(s) dropped, the newest: {self.engine.fault}")
+            self._bad_told = (status.bad_datagrams, 0.0)
+        if status.foreign and not self._foreign_told:
+            self.console.line(
+                f"a second sender ({self.port.newest_foreign}) is ignored while the first is alive"
+            )
+        self._foreign_told = status.foreign
+
+    def status(self) -> Status:
+        """Return the daemon's state."""
+        states = {child.name: child.state for child in self.children}
+        return Status(
+            state=self._state(),
+            session=str(self.session.folder) if self.session is not None else "",
+            frames=self.engine.frame_count,
+            bad_datagrams=self.engine.bad_datagrams,
+            bad_fields=self.engine.adapter.bad_fields,
+            dropped=self.port.dropped,
+            foreign=self.port.foreign,
+            voice=states.get("voice", "off"),
+            overlay=states.get("overlay", "off"),
+        )
+
+    def end_facts(self) -> dict[str, object]:
+        """Return what `session.json` says at the end."""
+        status = self.status()
+        return {
+            "frames": status.frames,
+            "bad_datagrams": status.bad_datagrams,
+            "bad_fields": status.bad_fields,
+            "dropped": status.dropped,
+            "foreign": status.foreign,
+            "processes": {
+                child.name: {
+                    "state": child.state,
+                    "detail": child.detail,
+                    "restarts": child.restarts,
+                }
+                for child in self.children
+            },
+        }
+
+    def _state(self) -> str:
+        if self._newest is None:
+            return "waiting"
+        if self._lost:
+            return "no data"
+        return "paused" if self._paused else "running"
+
+    def _status_line(self, status: Status) -> str:
+        if self._newest is None or self._newest.estimates is None or status.state != "running":
+            return f"{status.state} · {self.port.endpoint}"
+        estimates, frame = self._newest.estimates, self._newest.frames[-1]
+        demand = float(estimates.demand[-1])
+        asked = f"{demand:.2f}" if math.isfinite(demand) else "–"
+        lost = f" · {status.dropped} dropped" if status.dropped else ""
+        return (
+            f"lap {int(estimates.lap[-1])} · {frame.speed_mps:.0f} m/s · demand {asked} · "
+            f"{status.frames} frames{lost} · voice {status.voice} · overlay {status.overlay}"
+        )

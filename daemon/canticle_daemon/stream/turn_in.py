@@ -1,0 +1,422 @@
+"""Turn-in: when the steering that takes the corner begins.
+
+Theory of operation
+-------------------
+The *signal* is the steering-wheel angle (path curvature, scaled to it, where the stream has no
+steering) less what the road asks for before the corner: a dogleg or a banked arc is not a
+turn-in. The signal is a level plus the driver's corrections plus noise; at the turn-in a ramp
+begins. The detector is a generalized likelihood ratio for a ramp of the driver's own slope
+whose onset is unknown (M. Basseville, I. V. Nikiforov, Detection of Abrupt Changes, 1993):
+
+    S = max over onsets j of  dt·[ g·Σ τ·(y − b_j) − g²/2·Σ τ² ],     τ = t − t_j,
+
+with b_j the level held just before j. A bell-shaped correction does not keep up with the ramp
+and scores near zero. S is compared with a threshold calibrated on this driver's own straights
+(`Calibration`), so that a steady hand is judged sooner than a busy one.
+
+After the alarm the onset is the knot of a continuous hinge, level then ramp: live with the
+driver's usual slope as a prior (`live_knot`), at the apex by least squares over the whole
+neighborhood (`refined_knot`).
+"""
+
+from __future__ import annotations
+
+import math
+from collections import deque
+from dataclasses import dataclass
+
+import numpy as np
+
+from canticle_daemon.frame import FloatArray, FrameBlock, IntArray
+from canticle_daemon.physics.car import CarFile
+from canticle_daemon.stream.filters import Hold, RunningSum
+from canticle_daemon.stream.onset import Hinge, hinge_fit
+from canticle_daemon.track.profile import CornerPlan, Track
+
+LAGS_S = tuple(np.geomspace(0.06, 0.8, 12).tolist())
+LEVEL_S = 0.8
+SHORT_S = 0.15
+CLOCK_FRAMES = 9
+"""So many time steps tell the sampling interval; their median survives a lost packet."""
+RAMP_TIME_S = 1.2
+"""A driver's steering ramp before one was learned (common practice, no source)."""
+GRID_M = 2.0
+LEVEL_SHARE = 0.06
+"""Curvature up to this share of the corner's own still belongs to the straight."""
+DOGLEG_REACH_M = 60.0
+"""A driver rounds a dogleg off by about this much on either side."""
+DOGLEG_FACTOR = 1.6
+FLOOR_RAMP_S = 0.08
+PRIOR_RAMP_S = 0.35
+FALSE_ALARM_PER_WINDOW = 5e-5
+WINDOW_S = 0.5
+
+
+@dataclass(frozen=True, slots=True)
+class Guide:
+    """What the road asks of the steering, on a grid of stations round the lap.
+
+    Parameters
+    ----------
+    station_m
+        The grid, shape (n,).
+    held_1pm
+        Curvature of the straight, held on where a corner takes over; doglegs are in it.
+    dogleg_1pm
+        Size of the dogleg near this station, positive, 0 where there is none.
+    level_1pm
+        Curvature of the straight just before the next corner, constant over its zone.
+    """
+
+    station_m: FloatArray
+    held_1pm: FloatArray
+    dogleg_1pm: FloatArray
+    level_1pm: FloatArray
+
+    @classmethod
+    def of(cls, track: Track) -> Guide:
+        """Derive the guide from a track's curvature and corners."""
+        count = max(int(track.length_m / GRID_M), 8)
+        station = np.arange(count, dtype=np.float64) * (track.length_m / count)
+        curvature = track.curvature_1pm(station)
+        held, dogleg = curvature.copy(), np.zeros(count)
+        level = np.zeros(count)
+        for corner, previous in zip(
+            track.corners, (track.corners[-1:] + track.corners[:-1]), strict=True
+        ):
+            _guide_corner(track, corner, previous, (station, curvature, held, dogleg, level))
+        return cls(station, held, dogleg, level)
+
+
+def corner_curvature(track: Track, corner: CornerPlan) -> float:
+    """Return the largest curvature of a corner in its own direction, at least 1e-5 1/m."""
+    span = (corner.exit_m - corner.transition_start_m) % track.length_m
+    station = (corner.transition_start_m + np.arange(0.0, span, GRID_M)) % track.length_m
+    return max(float(np.max(corner.side * track.curvature_1pm(station))), 1e-5)
+
+
+def _guide_corner(
+    track: Track, corner: CornerPlan, previous: CornerPlan, grid: tuple[FloatArray, ...]
+) -> None:
+    """Fill the guide from the previous corner's exit to this corner's exit."""
+    station, curvature, held, dogleg, level = grid
+    length = track.length_m
+    start = previous.exit_m
+    approach = (corner.apex_m - start) % length or length
+    reach = (corner.exit_m - start) % length or length
+    ahead = (station - start) % length
+    order = np.argsort(ahead, kind="stable")
+    order = order[ahead[order] <= reach]
+    along, own = ahead[order], corner.side * curvature[order]
+    peak = corner_curvature(track, corner)
+    before_apex = along <= approach
+    zone = before_apex & (along >= (corner.zone_start_m - start) % length)
+    floor = max(float(np.min(own[zone], initial=peak)), 0.0)
+    straight = before_apex & (own <= floor + LEVEL_SHARE * (peak - floor))
+    begins = float(along[straight][-1]) if straight.any() else 0.0
+    near = straight & (along > begins - 80.0)
+    base = float(np.median(own[near])) if near.any() else floor
+    taken = along >= begins
+    level[order] = corner.side * base
+    held[order[taken]] = corner.side * base
+    away = np.where(taken, 0.0, np.abs(own - base))
+    away[away < LEVEL_SHARE * peak] = 0.0
+    for index in np.flatnonzero(away):
+        close = np.abs(along - along[index]) <= DOGLEG_REACH_M
+        dogleg[order[close]] = np.maximum(dogleg[order[close]], away[index])
+
+
+@dataclass(frozen=True, slots=True)
+class Steering:
+    """The turn-in signal of a block, positive left, as an angle at the steering wheel.
+
+    `beyond_rad` is beyond what the road asks for; `offset_rad` puts a dogleg back in, so that
+    the two together are beyond the straight's own level; `dogleg_rad` is the steering a dogleg
+    near here may take, 0 where there is none.
+    """
+
+    beyond_rad: FloatArray
+    offset_rad: FloatArray
+    dogleg_rad: FloatArray
+
+
+class SteeringStage:
+    """Builds the turn-in signal from steering, or from path curvature where there is none."""
+
+    def __init__(self, track: Track, car: CarFile) -> None:
+        self._guide = Guide.of(track)
+        self._track = track
+        self._gain = car.steering_ratio * car.wheelbase_m
+        self._hold = Hold(0.0)
+
+    def reset(self) -> None:
+        """Forget the past."""
+        self._hold.reset()
+
+    def process(self, block: FrameBlock, station_m: FloatArray) -> Steering:
+        """Return the signal of a block."""
+        guide, gain = self._guide, self._gain
+        length = self._track.length_m
+        held = np.interp(station_m, guide.station_m, guide.held_1pm, period=length)
+        level = np.interp(station_m, guide.station_m, guide.level_1pm, period=length)
+        dogleg = np.interp(station_m, guide.station_m, guide.dogleg_1pm, period=length)
+        wheel = block.steer_rad
+        if not np.isfinite(wheel).all():
+            moving = np.where(block.speed_mps > 5.0, block.speed_mps, np.nan)
+            cos = np.cos(self._track.bank_rad(station_m))
+            wheel = np.where(
+                np.isfinite(wheel), wheel, gain * block.yaw_rate_radps / (moving * cos)
+            )
+        beyond = self._hold.process(wheel - gain * held)
+        return Steering(beyond, gain * (held - level), DOGLEG_FACTOR * gain * dogleg)
+
+
+@dataclass(frozen=True, slots=True)
+class Ramps:
+    """The detector's output per frame, in the corner's own sense (positive into the corner).
+
+    `score` is S; `level_rad` the level held before the longest lag; `now_rad` the mean of the
+    last moments. NaN until a second of straight has been seen.
+    """
+
+    score: FloatArray
+    level_rad: FloatArray
+    now_rad: FloatArray
+
+
+class RampStage:
+    """Scores at every frame whether a steering ramp is under way."""
+
+    def __init__(self) -> None:
+        self.reset()
+
+    def reset(self) -> None:
+        """Forget the past."""
+        self.dt_s = math.nan
+        self._steps: list[float] = []
+        self._lags: IntArray = np.empty(0, np.int64)
+        self._sums = RunningSum()
+        self._count = 0
+        self._past: FloatArray = np.empty((4, 0))
+
+    def process(
+        self,
+        time_s: FloatArray,
+        dt_s: FloatArray,
+        beyond_rad: FloatArray,
+        side: FloatArray,
+        rest_rad: FloatArray,
+        slope_radps: float,
+    ) -> Ramps:
+        """Score a block.
+
+        Parameters
+        ----------
+        time_s, dt_s, beyond_rad
+            Stream clock, time since the frame before, and the signal, shape (n,).
+        side
+            +1 or −1, the sense of the corner that each frame approaches.
+        rest_rad
+            The level this driver usually holds there, in the corner's sense; NaN: not known.
+        slope_radps
+            Slope g of the ramp that is looked for.
+        """  # fmt: skip
+        waiting = self._learn_clock(dt_s)
+        silent = np.full(waiting, np.nan)
+        if waiting == time_s.size:
+            return Ramps(silent, silent.copy(), silent.copy())
+        rows = self._accumulate(time_s[waiting:], beyond_rad[waiting:])
+        score, level, now = self._score(rows, side[waiting:], rest_rad[waiting:], slope_radps)
+        self._past = rows[:, -self._past.shape[1] :].copy()
+        if not waiting:
+            return Ramps(score, level, now)
+        return Ramps(*(np.concatenate([silent, part]) for part in (score, level, now)))
+
+    def _learn_clock(self, dt_s: FloatArray) -> int:
+        """Return how many frames pass before the sampling interval is known."""
+        if self._lags.size:
+            return 0
+        for index, step in enumerate(dt_s.tolist()):
+            if step > 0.0:
+                self._steps.append(step)
+            if len(self._steps) == CLOCK_FRAMES:
+                self.dt_s = float(np.median(self._steps))
+                lags = np.rint(np.array(LAGS_S) / self.dt_s).astype(np.int64)
+                self._lags = np.unique(np.maximum(lags, 2))
+                self._level = max(round(LEVEL_S / self.dt_s), 4)
+                self._short = max(round(SHORT_S / self.dt_s), 2)
+                self._past = np.full((4, int(self._lags[-1]) + self._level + 1), np.nan)
+                return index + 1
+        return int(dt_s.size)
+
+    def _accumulate(self, time_s: FloatArray, signal: FloatArray) -> FloatArray:
+        count = np.arange(self._count + 1, self._count + 1 + signal.size, dtype=np.float64)
+        self._count += int(signal.size)
+        sums = self._sums.process(np.stack([signal, count * signal]))
+        return np.concatenate([self._past, np.stack([time_s, count, *sums])], axis=1)
+
+    def _score(
+        self, rows: FloatArray, side: FloatArray, rest: FloatArray, slope: float
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        time, count, total, moment = rows
+        lags = self._lags[:, None]
+        here = np.arange(self._past.shape[1], rows.shape[1])
+        onset = here - lags
+        total_j = total[onset]
+        long = side * (total_j - total[onset - self._level]) / self._level
+        short = side * (total_j - total[onset - self._short]) / self._short
+        level = np.where(short < long, np.fmin(long, np.maximum(short, rest)), long)
+        rise = total[here] - total_j
+        first = side * (moment[here] - moment[onset] - count[onset] * rise)
+        first -= level * (lags * (lags + 1) / 2)
+        step = (time[here] - time[onset]) / lags
+        squares = lags * (lags + 1) * (2 * lags + 1) / 6
+        score = step * (slope * step * first - 0.5 * slope**2 * step**2 * squares)
+        best = np.fmax.reduce(score, axis=0)
+        now = side * (total[here] - total[here - self._short]) / self._short
+        return best, long[-1], now
+
+
+class Calibration:
+    """The threshold on S from this driver's own calm stretches.
+
+    Maxima of S over windows of half a second are collected where no corner was taken. The
+    upper tenth is taken for an exponential tail (peaks over a threshold), extrapolated to
+    `FALSE_ALARM_PER_WINDOW`. Before enough is known, a cautious default holds.
+    """
+
+    def __init__(self) -> None:
+        self._maxima: deque[float] = deque(maxlen=600)
+
+    def add(self, maximum: float) -> None:
+        """Take in the largest S of one calm window."""
+        if math.isfinite(maximum):
+            self._maxima.append(max(maximum, 0.0))
+
+    def threshold(self, slope_radps: float) -> float:
+        """Return the threshold for a ramp slope."""
+        floor = _ramp_score(slope_radps, FLOOR_RAMP_S)
+        if len(self._maxima) < 30:
+            return _ramp_score(slope_radps, PRIOR_RAMP_S)
+        values = np.sort(np.array(self._maxima))
+        cut = float(values[int(0.9 * values.size)])
+        excess = float(np.mean(values[values >= cut] - cut))
+        tail = cut + excess * math.log(0.1 / FALSE_ALARM_PER_WINDOW)
+        return max(floor, tail, 1.05 * float(values[-1]))
+
+
+def _ramp_score(slope: float, duration_s: float) -> float:
+    """Return the S that a clean ramp of this slope reaches after a time."""
+    return slope**2 * duration_s**3 / 6.0
+
+
+@dataclass(frozen=True, slots=True)
+class Knot:
+    """An onset: its place along `x` with standard error, the level before, the slope after."""
+
+    x: float
+    std: float
+    level: float
+    slope: float
+
+
+def live_knot(time_s: FloatArray, signal: FloatArray, slope: float, slope_std: float) -> Knot:
+    """Estimate the onset at the moment of the alarm, with the usual slope as a prior.
+
+    Parameters
+    ----------
+    time_s, signal
+        The last second and a half, in the corner's sense; the ramp is at the end.
+    slope, slope_std
+        The driver's usual slope and its spread, per second.
+
+    Returns
+    -------
+    Knot
+        The mean of the posterior over onsets of the last 0.8 s and its standard deviation;
+        the noise is that of the signal before, inflated for corrections that last.
+    """
+    now = float(time_s[-1])
+    candidates = np.linspace(now - LAGS_S[-1], now, 161)[:-2]
+    before = time_s < candidates[:, None]
+    level_mask = before & (time_s >= candidates[:, None] - LEVEL_S)
+    weight = np.maximum(level_mask.sum(axis=1), 1)
+    level = np.where(level_mask, signal, 0.0).sum(axis=1) / weight
+    rough = np.diff(signal[: max(signal.size // 2, 3)])
+    noise2 = max(0.5 * float(np.mean(rough**2)), (0.02 * slope * LAGS_S[0]) ** 2)
+    calm = signal[time_s < now - 0.5]
+    wander2 = float(np.var(calm)) if calm.size > 3 else noise2
+    noise2 = max(noise2, wander2)
+    tau = np.maximum(time_s - candidates[:, None], 0.0)
+    away = np.where(level_mask | ~before, signal - level[:, None], 0.0)
+    prior = noise2 / slope_std**2
+    fitted = ((tau * away).sum(axis=1) + prior * slope) / ((tau**2).sum(axis=1) + prior)
+    misfit = ((away - fitted[:, None] * tau) ** 2).sum(axis=1)
+    dt = (now - float(time_s[0])) / max(time_s.size - 1, 1)
+    misfit = misfit / noise2 + ((fitted - slope) / slope_std) ** 2
+    # Corrections last about a quarter of a second, so neighboring samples say the same again.
+    share = min(1.0, 4.0 * dt / 0.12)
+    chance = np.exp(-0.5 * share * (misfit - misfit.min()))
+    chance /= chance.sum()
+    mean = float((chance * candidates).sum())
+    std = math.sqrt(float((chance * (candidates - mean) ** 2).sum()) + (0.3 * dt) ** 2)
+    best = int(np.argmin(np.abs(candidates - mean)))
+    return Knot(mean, std, float(level[best]), float(fitted[best]))
+
+
+def refined_knot(
+    time_s: FloatArray, way_m: FloatArray, signal: FloatArray, rest: float, amplitude: float
+) -> tuple[Knot, float] | None:
+    """Estimate the onset from the whole entry.
+
+    Parameters
+    ----------
+    time_s, way_m, signal
+        From before the zone to the apex, in the corner's sense; `way_m` rises.
+    rest
+        The level held before, as well as it is known.
+    amplitude
+        The usual height of the ramp; less than a third of it is no turn-in.
+
+    Returns
+    -------
+    (Knot, float) or None
+        The knot along the way (slope per meter), and the height of the ramp; None where
+        nothing like a turn-in is found.
+    """
+    dt = (float(time_s[-1]) - float(time_s[0])) / max(time_s.size - 1, 1)
+    smooth = _centered_mean(signal, max(round(0.05 / dt), 1)) - rest
+    height = float(smooth.max())
+    if height < amplitude / 3.0:
+        return None
+    hold = max(round(0.4 / dt), 2)
+    ahead = _mean_ahead(smooth, hold)
+    risen = np.flatnonzero((smooth > 0.5 * height) & (ahead > 0.5 * height))
+    if risen.size == 0:
+        return None
+    half = int(risen[0])
+    low = np.flatnonzero(smooth[:half] < 0.08 * height)
+    foot = int(low[-1]) if low.size else 0
+    first = max(foot - max(round(LEVEL_S / dt), 4), 0)
+    last = half + 1
+    if last - first < 8:
+        return None
+    hinge: Hinge = hinge_fit(way_m[first:last], signal[first:last], sign=1)
+    if not math.isfinite(hinge.knot) or hinge.slope <= 0.0:
+        return None
+    return Knot(hinge.knot, hinge.std_knot, hinge.level, hinge.slope), height
+
+
+def _centered_mean(values: FloatArray, half: int) -> FloatArray:
+    padded = np.concatenate([np.repeat(values[:1], half), values, np.repeat(values[-1:], half)])
+    sums = np.concatenate([[0.0], np.cumsum(padded)])
+    width = 2 * half + 1
+    mean: FloatArray = (sums[width:] - sums[:-width]) / width
+    return mean
+
+
+def _mean_ahead(values: FloatArray, count: int) -> FloatArray:
+    padded = np.concatenate([values, np.repeat(values[-1:], count)])
+    sums = np.concatenate([[0.0], np.cumsum(padded)])
+    mean: FloatArray = (sums[count:-1] - sums[: -count - 1])[: values.size] / count
+    return mean
