@@ -8,7 +8,7 @@ from typing import Any
 import msgspec
 import zmq
 
-from canticle_daemon.errors import RuntimeFault
+from canticle_daemon.errors import SystemFaultError
 from canticle_daemon.messages import read_bus_message
 
 MAX_MESSAGES_A_DRAIN = 1000
@@ -25,7 +25,7 @@ def subscribe(
 
     Raises
     ------
-    RuntimeFault
+    SystemFaultError
         The endpoint is not one that ZeroMQ understands.
     """
     socket = context.socket(zmq.SUB)
@@ -38,7 +38,7 @@ def subscribe(
         socket.connect(endpoint)
     except zmq.ZMQError as error:
         socket.close()
-        raise RuntimeFault(f"cannot join the bus at {endpoint}: {error}") from error
+        raise SystemFaultError(f"cannot join the bus at {endpoint}: {error}") from error
     return socket
 
 

@@ -15,7 +15,7 @@ from pathlib import Path
 import pygame
 import zmq
 
-from canticle_daemon.errors import RuntimeFault
+from canticle_daemon.errors import SystemFaultError
 from canticle_overlay import platforms
 from canticle_overlay.bus import drain, subscribe
 from canticle_overlay.lifeline import EXIT_CLOSED_BY_USER, EXIT_DONE, EXIT_FAULT, Lifeline
@@ -52,7 +52,7 @@ def main(argv: Sequence[str] | None = None) -> int:
     try:
         with zmq.Context() as context:
             return _show(options, lifeline, surrounding, context)
-    except RuntimeFault as fault:
+    except SystemFaultError as fault:
         lifeline.say("unavailable", str(fault))
         return EXIT_FAULT
     finally:

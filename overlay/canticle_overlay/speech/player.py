@@ -10,7 +10,7 @@ from pathlib import Path
 
 import pygame
 
-from canticle_daemon.errors import RuntimeFault
+from canticle_daemon.errors import SystemFaultError
 from canticle_overlay.speech.sound import SAMPLE_RATE_HZ
 
 BUFFER_SAMPLES = 256
@@ -19,7 +19,7 @@ OPEN_LIMIT_S = 5.0
 CHANNELS = 2
 
 
-class DeviceHangs(RuntimeFault):
+class DeviceHangs(SystemFaultError):
     """The sound device never answered; the thread that asked it is still waiting."""
 
 
@@ -43,13 +43,13 @@ class Player:
 
         Raises
         ------
-        RuntimeFault
+        SystemFaultError
             The file is no sound.
         """
         try:
             clip = pygame.mixer.Sound(str(path))
         except (pygame.error, OSError) as error:
-            raise RuntimeFault(f"{path}: cannot be played: {error}") from error
+            raise SystemFaultError(f"{path}: cannot be played: {error}") from error
         clip.set_volume(self._volume)
         self._clips[text] = clip
 
@@ -75,7 +75,7 @@ def open_player(volume: float, limit_s: float = OPEN_LIMIT_S) -> Player:
 
     Raises
     ------
-    RuntimeFault
+    SystemFaultError
         There is none, or (`DeviceHangs`) it does not answer.
     """
     faults: list[str] = []
@@ -86,7 +86,7 @@ def open_player(volume: float, limit_s: float = OPEN_LIMIT_S) -> Player:
     if thread.is_alive():
         raise DeviceHangs(f"the sound device did not answer within {limit_s:g} s")
     if faults:
-        raise RuntimeFault(f"no sound device ({faults[0]})")
+        raise SystemFaultError(f"no sound device ({faults[0]})")
     return Player(volume)
 
 

@@ -17,7 +17,7 @@ from pathlib import Path
 
 import zmq
 
-from canticle_daemon.errors import RuntimeFault
+from canticle_daemon.errors import SystemFaultError
 from canticle_daemon.messages import Cue
 from canticle_overlay.bus import drain, subscribe
 from canticle_overlay.lifeline import EXIT_DONE, EXIT_FAULT, Lifeline
@@ -92,7 +92,7 @@ class Speech:
         if fault is None and self._player is not None:
             try:
                 self._player.load(result.text, result.path)
-            except RuntimeFault as error:
+            except SystemFaultError as error:
                 fault = str(error)
         if fault is not None:
             self.faults[result.text] = fault
@@ -139,7 +139,7 @@ def main(argv: Sequence[str] | None = None) -> int:
     speech = Speech(player, renderer.request)
     try:
         _run(options, lifeline, speech, results, why_silent)
-    except RuntimeFault as fault:
+    except SystemFaultError as fault:
         lifeline.say("unavailable", str(fault))
         return EXIT_FAULT
     finally:
@@ -213,7 +213,7 @@ def _report(
 def _open(volume: float) -> tuple[Player | None, str | None, bool]:
     try:
         return open_player(volume), None, False
-    except RuntimeFault as fault:
+    except SystemFaultError as fault:
         return None, str(fault), isinstance(fault, DeviceHangs)
 
 

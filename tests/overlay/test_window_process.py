@@ -1,0 +1,171 @@
+"""The overlay as its own process, on Xvfb where it is installed, else on SDL's dummy driver."""
+
+from __future__ import annotations
+
+import os
+import shutil
+import signal
+import subprocess
+import time
+from collections.abc import Callable, Iterator
+from pathlib import Path
+
+import numpy as np
+import pygame
+import pytest
+from overlay.companion import Companion
+
+from canticle_daemon.messages import Entry, Estimate, TrackView
+from canticle_overlay.palette import ORANGE, PANEL, SKY_BLUE, Color
+from canticle_overlay.platforms.plain import place
+from canticle_overlay.view import COLUMNS, size
+
+pytestmark = pytest.mark.io
+
+MODULE = "canticle_overlay.window"
+MakeEstimate = Callable[..., Estimate]
+
+
+@pytest.fixture(scope="module")
+def screen() -> Iterator[dict[str, str | None]]:
+    """The environment of the best screen there is."""
+    xvfb = shutil.which("Xvfb")
+    if xvfb is None:
+        yield {"SDL_VIDEODRIVER": "dummy", "DISPLAY": None}
+        return
+    read, write = os.pipe()
+    server = subprocess.Popen(
+        [xvfb, "-displayfd", str(write), "-screen", "0", "1280x720x24", "-nolisten", "tcp"],
+        pass_fds=(write,),
+        stderr=subprocess.DEVNULL,
+    )
+    os.close(write)
+    with os.fdopen(read) as numbers:
+        number = numbers.readline().strip()
+    yield {"DISPLAY": f":{number}", "SDL_VIDEODRIVER": None, "WAYLAND_DISPLAY": None}
+    server.terminate()
+    server.wait(10)
+
+
+def feed(
+    overlay: Companion, track: TrackView, estimates: Iterator[Estimate], seconds: float
+) -> None:
+    end_s = time.monotonic() + seconds
+    while time.monotonic() < end_s:
+        overlay.send("track", track)
+        overlay.send("estimate", next(estimates))
+        time.sleep(0.02)
+
+
+def pixels(file: Path) -> np.ndarray:
+    return pygame.surfarray.array3d(pygame.image.load(str(file))).swapaxes(0, 1)
+
+
+def wait_for(file: Path, limit_s: float = 10) -> np.ndarray:
+    end_s = time.monotonic() + limit_s
+    while time.monotonic() < end_s:
+        if file.exists() and file.stat().st_size:
+            time.sleep(0.05)
+            return pixels(file)
+        time.sleep(0.02)
+    raise AssertionError(f"no {file.name} within {limit_s} s")
+
+
+def count(picture: np.ndarray, color: Color, slack: int = 12) -> int:
+    near = np.abs(picture.astype(int) - np.array(color[:3])).max(axis=2) <= slack
+    return int(near.sum())
+
+
+def columns(picture: np.ndarray) -> np.ndarray:
+    left, top, width, height = COLUMNS
+    return picture[top : top + height - 3, left : left + width]
+
+
+def test_live_data_is_drawn(
+    screen: dict[str, str | None],
+    track: TrackView,
+    estimate: MakeEstimate,
+    entry: Callable[..., Entry],
+    tmp_path: Path,
+) -> None:
+    file = tmp_path / "strip.png"
+    with Companion(MODULE, "--screenshot", str(file), "--after", "1.2", **screen) as overlay:
+        assert overlay.state()["state"] == "ready"
+        stations = iter(range(600, 10_000))
+        feed(overlay, track, (estimate(float(at)) for at in stations), 0.3)
+        overlay.send("entry", entry("Turn 1"))
+        feed(overlay, track, (estimate(700 + at / 10) for at in stations), 1.0)
+        picture = wait_for(file)
+        assert overlay.let_go() < 0.5
+        assert overlay.process.returncode == 0
+    assert picture.shape[:2] == size(1.0)[::-1]
+    assert count(picture, PANEL) > picture.shape[0] * picture.shape[1] / 2
+    assert count(columns(picture), SKY_BLUE) > 1000, "the columns stand"
+    assert count(picture, ORANGE) > 30, "the turn-in is pinned"
+
+
+def test_old_numbers_are_not_shown(
+    screen: dict[str, str | None], track: TrackView, estimate: MakeEstimate, tmp_path: Path
+) -> None:
+    file = tmp_path / "strip.png"
+    with Companion(MODULE, "--screenshot", str(file), "--after", "1.6", **screen) as overlay:
+        overlay.state()
+        feed(overlay, track, (estimate(float(at)) for at in range(600, 9999)), 0.4)
+        picture = wait_for(file)
+    assert count(columns(picture), SKY_BLUE) == 0
+
+
+def test_malformed_messages_are_ignored(
+    screen: dict[str, str | None], track: TrackView, estimate: MakeEstimate, tmp_path: Path
+) -> None:
+    file = tmp_path / "strip.png"
+    junk = (b"estimate ", b"estimate {", b"estimate {}", b"track []", b"entry \xff", b"cue null")
+    with Companion(MODULE, "--screenshot", str(file), "--after", "0.9", **screen) as overlay:
+        overlay.state()
+        for message in junk * 50:
+            overlay.send_raw(message)
+        feed(overlay, track, (estimate(float(at)) for at in range(600, 9999)), 1.0)
+        picture = wait_for(file)
+        assert overlay.process.poll() is None
+    assert count(columns(picture), SKY_BLUE) > 1000
+
+
+def test_scale_makes_it_larger(screen: dict[str, str | None], tmp_path: Path) -> None:
+    file = tmp_path / "strip.png"
+    options = ("--scale", "1.5", "--left", "0", "--top", "10", "--screenshot", str(file))
+    with Companion(MODULE, *options, "--after", "0.1", **screen) as overlay:
+        assert "1230 by 198" in overlay.state()["detail"]
+        assert wait_for(file).shape[:2] == (198, 1230)
+
+
+def test_an_interrupt_is_left_to_the_daemon_and_terminate_ends_it(
+    screen: dict[str, str | None],
+) -> None:
+    with Companion(MODULE, **screen) as overlay:
+        overlay.state()
+        overlay.process.send_signal(signal.SIGINT)
+        time.sleep(0.2)
+        assert overlay.process.poll() is None
+        overlay.process.terminate()
+        assert overlay.process.wait(2) == 0
+
+
+def test_without_a_display_it_says_so_and_ends_well() -> None:
+    nowhere = {"DISPLAY": None, "WAYLAND_DISPLAY": None, "SDL_VIDEODRIVER": None}
+    with Companion(MODULE, **nowhere) as overlay:
+        state = overlay.state()
+        assert state["state"] == "unavailable"
+        assert state["detail"].startswith("no display")
+        assert overlay.process.wait(5) == 0
+
+
+def test_an_unusable_endpoint_is_one_line() -> None:
+    with Companion(MODULE, "--bus", "nonsense", SDL_VIDEODRIVER="dummy") as overlay:
+        assert "cannot join the bus at nonsense" in overlay.state()["detail"]
+        assert overlay.process.wait(5) == 1
+
+
+def test_where_the_window_goes() -> None:
+    assert place((820, 132), (None, None), (1920, 1080)) == (550, 900)
+    assert place((820, 132), (-1900, 5), (1920, 1080)) == (-1900, 5)
+    assert place((3000, 400), (None, None), (1920, 300)) == (0, 0)
