@@ -19,7 +19,7 @@ OPEN_LIMIT_S = 5.0
 CHANNELS = 2
 
 
-class DeviceHangs(SystemFaultError):
+class DeviceHangsError(SystemFaultError):
     """The sound device never answered; the thread that asked it is still waiting."""
 
 
@@ -76,7 +76,7 @@ def open_player(volume: float, limit_s: float = OPEN_LIMIT_S) -> Player:
     Raises
     ------
     SystemFaultError
-        There is none, or (`DeviceHangs`) it does not answer.
+        There is none, or (`DeviceHangsError`) it does not answer.
     """
     faults: list[str] = []
     thread = threading.Thread(target=_open_mixer, args=(faults,), name="mixer", daemon=True)
@@ -84,7 +84,7 @@ def open_player(volume: float, limit_s: float = OPEN_LIMIT_S) -> Player:
         thread.start()
         thread.join(limit_s)
     if thread.is_alive():
-        raise DeviceHangs(f"the sound device did not answer within {limit_s:g} s")
+        raise DeviceHangsError(f"the sound device did not answer within {limit_s:g} s")
     if faults:
         raise SystemFaultError(f"no sound device ({faults[0]})")
     return Player(volume)

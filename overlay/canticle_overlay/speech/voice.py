@@ -22,7 +22,7 @@ from canticle_daemon.messages import Cue
 from canticle_overlay.bus import drain, subscribe
 from canticle_overlay.lifeline import EXIT_DONE, EXIT_FAULT, Lifeline
 from canticle_overlay.speech.engine import VoiceSettings, default_voice
-from canticle_overlay.speech.player import DeviceHangs, Player, open_player
+from canticle_overlay.speech.player import DeviceHangsError, Player, open_player
 from canticle_overlay.speech.render import (
     Child,
     PhraseCache,
@@ -214,7 +214,7 @@ def _open(volume: float) -> tuple[Player | None, str | None, bool]:
     try:
         return open_player(volume), None, False
     except SystemFaultError as fault:
-        return None, str(fault), isinstance(fault, DeviceHangs)
+        return None, str(fault), isinstance(fault, DeviceHangsError)
 
 
 def _parse(argv: Sequence[str] | None) -> Options:
