@@ -43,6 +43,8 @@ DEMAND_TOP = 1.2
 COLUMN_TOP = 1.15
 HATCH_PX = 7
 SCALE_BAR_M = 50
+BEYOND_M = 100.0
+"""A turn-in this far outside the ribbon is still shown, by an arrow at its edge."""
 PINS = ((34, 3, 0.0), (28, 2, 0.2), (24, 2, 0.3), (20, 2, 0.4), (16, 2, 0.48))
 """By age, newest first: height, width, share of the panel's color mixed into the accent."""
 WHEELS = ("LF", "RF", "LR", "RR")
@@ -135,17 +137,23 @@ def _dividers() -> Iterator[Shape]:
 
 
 def _header(scene: Scene) -> Iterator[Shape]:
-    left, right = RIBBON[0], _right(RIBBON)
     name = scene.ribbon.corner.corner if scene.ribbon else "Entry"
-    yield Text(left, 10, _shortened(name), PALE, TEXT_SIZE)
-    words = [CONDITION_TEXT[scene.condition]] if CONDITION_TEXT[scene.condition] else []
-    words += [scene.detail] if scene.detail else []
+    yield Text(RIBBON[0], 10, _shortened(name), PALE, TEXT_SIZE)
+    words, color = _news(scene)
     if words:
-        yield Text((left + right) // 2, 10, ": ".join(words), ORANGE, TEXT_SIZE, "center")
+        yield Text(_right(RIBBON), 10, words, color, TEXT_SIZE, "right")
+
+
+def _news(scene: Scene) -> tuple[str, Color]:
+    """Return the most pressing words: the state when it is not well, a cue, the last entry."""
+    state = CONDITION_TEXT[scene.condition]
     if scene.cue:
-        yield Text(right, 10, scene.cue, ORANGE, TEXT_SIZE, "right")
-    elif scene.condition != "no data" and scene.ribbon and scene.ribbon.passes:
-        yield Text(right, 10, result_text(scene.ribbon.passes[0]), PALE, TEXT_SIZE, "right")
+        return " · ".join(filter(None, (state, scene.cue))), ORANGE
+    if state:
+        return ": ".join(filter(None, (state, scene.detail))), ORANGE
+    if scene.ribbon and scene.ribbon.passes:
+        return result_text(scene.ribbon.passes[0]), PALE
+    return "", PALE
 
 
 def result_text(done: Pass) -> str:
@@ -187,13 +195,18 @@ class _Plot:
         """Return how many pixels a distance takes."""
         return round(distance_m / self._span_m * RIBBON[2])
 
+    def beyond_m(self, station_m: float) -> float:
+        """Return how far a station is outside the ribbon, from the nearer end; 0 inside."""
+        past_m = max(self._distance(station_m) - self._span_m, 0.0)
+        return min(past_m, self._length_m - self._span_m - past_m) if past_m > 0 else 0.0
+
     def near(self, station_m: float) -> int:
         """Return the pixel of a station, of the nearer end when it is outside."""
         inside = self.x(station_m)
         if inside is not None:
             return inside
-        beyond_m = self._distance(station_m) - self._span_m
-        before = beyond_m > (self._length_m - self._span_m) / 2
+        past_m = self._distance(station_m) - self._span_m
+        before = past_m > (self._length_m - self._span_m) / 2
         return RIBBON[0] if before else _right(RIBBON)
 
     def ground(self) -> list[Point]:
@@ -206,6 +219,8 @@ class _Plot:
     def ground_y(self, station_m: float) -> int:
         """Return the height of the ground at a station, as a pixel row."""
         distance_m = self._distance(station_m)
+        if self.x(station_m) is None:
+            distance_m = 0.0 if self.near(station_m) == RIBBON[0] else self._span_m
         before = self._bank[0]
         for after in self._bank:
             if after[0] >= distance_m:
@@ -268,14 +283,17 @@ def _mark(ribbon: Ribbon, plot: _Plot) -> Iterator[Shape]:
 def _pins(ribbon: Ribbon, plot: _Plot) -> Iterator[Shape]:
     aged = list(zip(ribbon.passes, PINS, strict=False))
     for done, (height, width, fade) in reversed(aged):
-        x = None if done.turn_in_m is None else plot.x(done.turn_in_m)
-        if x is None or done.turn_in_m is None:
+        if done.turn_in_m is None or plot.beyond_m(done.turn_in_m) > BEYOND_M:
             continue
+        x = plot.near(done.turn_in_m)
         color = mix(ORANGE, PANEL, fade)
         foot = plot.ground_y(done.turn_in_m)
-        yield Line(((x, foot), (x, foot - height)), color, width)
-        if fade == 0.0:
-            head = foot - height
+        head = foot - height
+        yield Line(((x, foot), (x, head)), color, width)
+        if plot.x(done.turn_in_m) is None:
+            outward = -8 if x == RIBBON[0] else 8
+            yield Polygon(((x, head - 5), (x + outward, head), (x, head + 5)), color)
+        elif fade == 0.0:
             yield Polygon(((x, head - 6), (x + 6, head), (x, head + 6), (x - 6, head)), color)
 
 

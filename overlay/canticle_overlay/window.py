@@ -76,10 +76,10 @@ def _show(
             return EXIT_DONE
         surrounding.open(size(options.scale), options.position)
         lifeline.say("ready", f"window of {size(options.scale)[0]} by {size(options.scale)[1]}")
-        return _Strip(options, surrounding, newest, events).run(lifeline)
+        return Strip(options, surrounding, newest, events).run(lifeline)
 
 
-class _Strip:
+class Strip:
     """The loop: drain, fold, draw what changed."""
 
     def __init__(

@@ -7,7 +7,15 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from canticle_daemon.messages import TrackView
-from canticle_overlay.palette import GROUND, PANEL, RULE, SHAPE_CONTRAST, TEXT_CONTRAST, contrast
+from canticle_overlay.palette import (
+    GROUND,
+    ORANGE,
+    PANEL,
+    RULE,
+    SHAPE_CONTRAST,
+    TEXT_CONTRAST,
+    contrast,
+)
 from canticle_overlay.state import Pass, Ribbon, Scene
 from canticle_overlay.view import (
     COLUMNS,
@@ -117,6 +125,20 @@ def test_turn_ins_outside_the_ribbon_are_not_drawn(scene: Scene) -> None:
     assert draw(replace(scene, ribbon=away)) == draw(replace(scene, ribbon=none))
 
 
+@pytest.mark.parametrize(("turn_in_m", "x", "tip"), [(2400.0, 16, 8), (440.0, 516, 524)])
+def test_a_turn_in_just_outside_is_an_arrow_at_the_edge(
+    scene: Scene, turn_in_m: float, x: int, tip: int
+) -> None:
+    assert scene.ribbon is not None
+    ribbon = replace(scene.ribbon, passes=(Pass(turn_in_m, "early", 90.0, 0.5),))
+    arrows = [
+        shape
+        for shape in draw(replace(scene, ribbon=ribbon))
+        if isinstance(shape, Polygon) and len(shape.points) == 3 and shape.color == ORANGE
+    ]
+    assert [[at for at, _ in arrow.points] for arrow in arrows] == [[x, tip, x]]
+
+
 def column_heights(scene: Scene) -> list[int]:
     left, _, width, _ = COLUMNS
     return [
@@ -184,6 +206,10 @@ def test_a_cue_takes_the_place_of_the_result(scene: Scene) -> None:
     said = texts(draw(replace(scene, cue="One, ten late.")))
     assert "One, ten late." in said
     assert not any("peak demand" in text for text in said)
+
+
+def test_a_cue_does_not_hide_that_the_data_are_bad(scene: Scene) -> None:
+    assert "Bad data · late" in texts(draw(replace(scene, condition="bad data", cue="late")))
 
 
 def test_a_track_without_a_profile_is_drawn_too(scene: Scene, track: TrackView) -> None:

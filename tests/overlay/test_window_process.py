@@ -13,12 +13,17 @@ from pathlib import Path
 import numpy as np
 import pygame
 import pytest
+import zmq
 from overlay.companion import Companion
 
 from canticle_daemon.messages import Entry, Estimate, TrackView
+from canticle_overlay.lifeline import EXIT_CLOSED_BY_USER, EXIT_DONE
+from canticle_overlay.painter import rendered
 from canticle_overlay.palette import ORANGE, PANEL, SKY_BLUE, Color
-from canticle_overlay.platforms.plain import place
-from canticle_overlay.view import COLUMNS, size
+from canticle_overlay.platforms.plain import PlainWindow, place
+from canticle_overlay.state import Pass, Ribbon, Scene
+from canticle_overlay.view import COLUMNS, Text, draw, size
+from canticle_overlay.window import Options, Strip, open_display
 
 pytestmark = pytest.mark.io
 
@@ -163,6 +168,87 @@ def test_an_unusable_endpoint_is_one_line() -> None:
     with Companion(MODULE, "--bus", "nonsense", SDL_VIDEODRIVER="dummy") as overlay:
         assert "cannot join the bus at nonsense" in overlay.state()["detail"]
         assert overlay.process.wait(5) == 1
+
+
+class NoBus:
+    def recv(self, flags: int) -> bytes:
+        raise zmq.Again
+
+
+class FakeSurrounding(PlainWindow):
+    def __init__(self) -> None:
+        super().__init__()
+        self.shown = 0
+
+    def present(self, picture: pygame.Surface) -> None:
+        self.shown += 1
+
+
+class FakeLifeline:
+    """Holds for a number of frames; before the last one something happens."""
+
+    def __init__(self, frames: int, event: int | None = None) -> None:
+        self.frames = frames
+        self.event = event
+
+    @property
+    def holds(self) -> bool:
+        self.frames -= 1
+        if self.frames == 0 and self.event is not None:
+            pygame.event.post(pygame.event.Event(self.event))
+        return self.frames >= 0
+
+    def wait(self, seconds: float) -> bool:
+        return True
+
+
+@pytest.fixture
+def in_memory(monkeypatch: pytest.MonkeyPatch) -> Iterator[FakeSurrounding]:
+    monkeypatch.setenv("SDL_VIDEODRIVER", "dummy")
+    assert open_display() is None
+    surrounding = FakeSurrounding()
+    surrounding.open(size(1.0), (None, None))
+    pygame.event.get()
+    yield surrounding
+    surrounding.close()
+
+
+@pytest.mark.parametrize(
+    ("event", "status", "pictures"),
+    [
+        (None, EXIT_DONE, 1),
+        (pygame.QUIT, EXIT_CLOSED_BY_USER, 1),
+        (pygame.VIDEOEXPOSE, EXIT_DONE, 2),
+    ],
+)
+def test_the_loop_draws_changes_only_and_leaves_when_closed(
+    in_memory: FakeSurrounding, event: int | None, status: int, pictures: int
+) -> None:
+    options = Options("", 1.0, (None, None), None, 1e9)
+    strip = Strip(options, in_memory, NoBus(), NoBus())  # type: ignore[arg-type]
+    assert strip.run(FakeLifeline(5, event)) == status  # type: ignore[arg-type]
+    assert in_memory.shown == pictures
+
+
+@pytest.mark.parametrize("cue", ["", "Three, three hundred lengths late."])
+@pytest.mark.parametrize("condition", ["live", "no data", "bad data", "learning"])
+def test_texts_do_not_run_into_each_other(track: TrackView, condition: str, cue: str) -> None:
+    pygame.font.init()
+    long = Pass(90.0, "on", -13.0, 0.71)
+    corner = track.corners[0]
+    corner.corner = "Chapel bend after the bridge"
+    ribbon = Ribbon(corner, track.length_m, (long,), ((2450.0, 0.1), (2460.0, 0.2)))
+    detail = "datagrams come, but are bad" if condition == "no data" else ""
+    scene = Scene(condition, detail, 188, ribbon, cue)  # type: ignore[arg-type]
+    boxes = []
+    for text in (shape for shape in draw(scene) if isinstance(shape, Text)):
+        width, height = rendered(text.text, text.size, text.color).get_size()
+        left = text.x - round({"left": 0.0, "center": 0.5, "right": 1.0}[text.align] * width)
+        boxes.append(pygame.Rect(left, text.top, width, height))
+    for index, box in enumerate(boxes):
+        assert box.left >= 0
+        assert box.right <= size(1.0)[0]
+        assert box.collidelist(boxes[index + 1 :]) == -1
 
 
 def test_where_the_window_goes() -> None:
