@@ -363,7 +363,7 @@ def _ledger_scale(scene: Scene) -> float:
     return max(last * 1.25, now) if last > 0 else steps
 
 
-def _shortened(name: str, limit: int = 18) -> str:
+def _shortened(name: str, limit: int = 15) -> str:
     return name if len(name) <= limit else name[: limit - 1].rstrip() + "…"
 
 
