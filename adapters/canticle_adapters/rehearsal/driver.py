@@ -28,7 +28,7 @@ Pair = tuple[float, float]
 Triple = tuple[float, float, float]
 
 USUAL_MPS = 66.0
-CAR_LAG_S = 0.28
+CAR_LAG_S = 0.36
 """About how long this car's path takes to follow its wheel."""
 TRIM_SHARE = STEP_S / 2.5
 UNDERSTEER = 5.6e-4
@@ -37,8 +37,9 @@ PEDAL_SHARE = STEP_S / 0.12
 SLOWING_MPS2 = 4.5
 STRAIGHT_LEAD_M = 60.0
 LEAST_RAMP_M = 8.0
-SETTLE_M = 74.0
+SETTLE_M = 72.0
 MOST_LEVEL = 1.6
+MOST_TURN_RAD = math.radians(15.0)
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,7 +63,7 @@ class Style:
     correction_deg: float = 0.5
     corrections_per_s: float = 0.7
     correction_s: float = 0.5
-    lane_m: float = -3.5
+    lane_m: float = -3.4
     low_m: Pair = (1.5, 1.5)
     speed_mps: Pair = (62.8, 59.0)
     speed_spread: float = 0.006
@@ -423,7 +424,8 @@ class Driver:
         path.add(car.lateral_m, car.heading_rad + car.vy_mps / car.vx_mps, 0.0)
         entry = self._entry(intent)
         self._planner.straight_on(path, math.floor(entry.start_m))
-        self._target = self._wheel_for(self._planner.settle(path, entry), entry.start_m + 20.0)
+        level = self._planner.settle(path, entry)
+        self._target = min(self._wheel_for(level, entry.start_m + 20.0), MOST_TURN_RAD)
         marks, start = intent.marks, intent.start_m
         turn_out = start + marks.arc_end_m - 80.0
         low = (float(path.end_m), turn_out - 40.0, intent.low_m)

@@ -85,8 +85,8 @@ class CornerMarks:
     exit_m: float
 
 
-TURN_1 = End("Turn 1", 225.0, 22.0, 90.0, 120.0, -4.0, 15.0)
-TURN_3 = End("Turn 3", 235.0, 16.0, 90.0, 110.0, -2.0, 15.0)
+TURN_1 = End("Turn 1", 225.0, 22.0, 90.0, 120.0, -4.0, 18.0)
+TURN_3 = End("Turn 3", 235.0, 16.0, 90.0, 110.0, -2.0, 16.0)
 FRONT_BANK_DEG = 4.5
 BACK_BANK_DEG = 3.0
 DOGLEG_DEG = 7.0
