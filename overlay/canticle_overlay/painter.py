@@ -8,30 +8,41 @@ from functools import lru_cache
 import pygame
 
 from canticle_overlay.palette import Color
-from canticle_overlay.view import Line, Polygon, Rect, Shape, Text
+from canticle_overlay.view import Line, Part, Polygon, Rect, Text
 
 FINE = 2
 """Shapes are drawn this much larger and scaled down, which smooths their edges."""
 
 
 class Painter:
-    """Holds the surfaces of one window size."""
+    """Holds the picture of one window size and repaints the parts of it that change."""
 
     def __init__(self, size: tuple[int, int]) -> None:
         pygame.font.init()
         self._fine = pygame.Surface((size[0] * FINE, size[1] * FINE))
-        self._picture = pygame.Surface(size)
+        self.picture = pygame.Surface(size)
+        self._painted: dict[int, Part] = {}
 
-    def paint(self, shapes: Sequence[Shape]) -> pygame.Surface:
-        """Return the picture; the next call paints over it."""
-        for shape in shapes:
+    def paint(self, parts: Sequence[Part]) -> list[pygame.Rect]:
+        """Bring the picture up to date; return what of it is new."""
+        changed = [part for part in parts if self._painted.get(part.left) != part]
+        for part in changed:
+            self._painted[part.left] = part
+        return [self._repaint(part) for part in changed]
+
+    def _repaint(self, part: Part) -> pygame.Rect:
+        box = pygame.Rect(part.left, 0, part.width, self.picture.get_height())
+        fine_box = pygame.Rect([FINE * side for side in box])
+        self._fine.set_clip(fine_box)
+        for shape in part.shapes:
             if not isinstance(shape, Text):
                 _paint_shape(self._fine, shape)
-        pygame.transform.smoothscale(self._fine, self._picture.get_size(), self._picture)
-        for shape in shapes:
+        piece = self.picture.subsurface(box)
+        pygame.transform.smoothscale(self._fine.subsurface(fine_box), box.size, piece)
+        for shape in part.shapes:
             if isinstance(shape, Text):
-                _paint_text(self._picture, shape)
-        return self._picture
+                _paint_text(self.picture, shape)
+        return box
 
 
 def _paint_shape(surface: pygame.Surface, shape: Rect | Polygon | Line) -> None:

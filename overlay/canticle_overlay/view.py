@@ -110,8 +110,17 @@ def size(scale: float) -> tuple[int, int]:
     return round(WIDTH * scale), round(HEIGHT * scale)
 
 
-def draw(scene: Scene, scale: float = 1.0) -> tuple[Shape, ...]:
-    """Return the shapes of a scene, the backmost first.
+@dataclass(frozen=True, slots=True)
+class Part:
+    """A full-height piece of the strip: repainted when its shapes differ, else left alone."""
+
+    left: int
+    width: int
+    shapes: tuple[Shape, ...]
+
+
+def draw(scene: Scene, scale: float = 1.0) -> tuple[Part, ...]:
+    """Return the parts of a scene, each with its shapes, the backmost first.
 
     Parameters
     ----------
@@ -120,20 +129,26 @@ def draw(scene: Scene, scale: float = 1.0) -> tuple[Shape, ...]:
     scale
         1 for the design size.
     """
-    shapes = (
-        Rect(0, 0, WIDTH, HEIGHT, PANEL),
-        *_dividers(),
-        *_header(scene),
-        *_ribbon(scene.ribbon),
-        *_columns(scene),
-        *_ledger(scene),
+    edges = (0, (_right(RIBBON) + COLUMNS[0]) // 2, (_right(COLUMNS) + LEDGER[0]) // 2, WIDTH)
+    contents = (
+        (*_header(scene), *_ribbon(scene.ribbon)),
+        tuple(_columns(scene)),
+        tuple(_ledger(scene)),
     )
-    return shapes if scale == 1.0 else tuple(_scaled(shape, scale) for shape in shapes)
+    return tuple(
+        _part(left, right, shapes, scale)
+        for left, right, shapes in zip(edges, edges[1:], contents, strict=False)
+    )
 
 
-def _dividers() -> Iterator[Shape]:
-    for x in ((RIBBON[0] + RIBBON[2] + COLUMNS[0]) // 2, (_right(COLUMNS) + LEDGER[0]) // 2):
-        yield Line(((x, 12), (x, HEIGHT - 12)), RULE)
+def _part(left: int, right: int, shapes: tuple[Shape, ...], scale: float) -> Part:
+    back: tuple[Shape, ...] = (Rect(left, 0, right - left, HEIGHT, PANEL),)
+    if left > 0:
+        back = (*back, Line(((left, 12), (left, HEIGHT - 12)), RULE))
+    first, last = round(left * scale), round(right * scale)
+    if scale == 1.0:
+        return Part(first, last - first, (*back, *shapes))
+    return Part(first, last - first, tuple(_scaled(shape, scale) for shape in (*back, *shapes)))
 
 
 def _header(scene: Scene) -> Iterator[Shape]:
@@ -169,7 +184,7 @@ def result_text(done: Pass) -> str:
         return f"not judged{peak}"
     if done.verdict == "on":
         side = "before" if done.margin_m > 0 else "after"
-        return f"in the window, {abs(done.margin_m):.0f} m {side} the mark{peak}"
+        return f"on, {abs(done.margin_m):.0f} m {side} the mark{peak}"
     return f"{abs(done.margin_m):.0f} m {done.verdict}{peak}"
 
 

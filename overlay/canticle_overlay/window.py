@@ -21,7 +21,7 @@ from canticle_overlay.bus import drain, subscribe
 from canticle_overlay.lifeline import EXIT_CLOSED_BY_USER, EXIT_DONE, EXIT_FAULT, Lifeline
 from canticle_overlay.painter import Painter
 from canticle_overlay.state import Display
-from canticle_overlay.view import Shape, draw, size
+from canticle_overlay.view import draw, size
 
 FRAME_S = 1 / 30
 TEND_S = 1.0
@@ -94,7 +94,6 @@ class Strip:
         self._sockets = (events, newest)  # in this order: an entry before the exit that ends it
         self._display = Display()
         self._painter = Painter(size(options.scale))
-        self._shown: tuple[Shape, ...] = ()
         self._screenshot = options.screenshot
 
     def run(self, lifeline: Lifeline) -> int:
@@ -106,7 +105,7 @@ class Strip:
             if pygame.QUIT in happened:
                 return EXIT_CLOSED_BY_USER
             if happened & EXPOSED:
-                self._shown = ()
+                self._surrounding.present(self._painter.picture, [self._painter.picture.get_rect()])
             now_s = time.monotonic()
             self.step(now_s)
             if now_s - begun_s >= self._options.after_s:
@@ -123,14 +122,14 @@ class Strip:
         for socket in self._sockets:
             for topic, payload in drain(socket):
                 self._display.fold(topic, payload, now_s)
-        shapes = draw(self._display.scene(now_s), self._options.scale)
-        if shapes != self._shown:
-            self._shown = shapes
-            self._surrounding.present(self._painter.paint(shapes))
+        parts = draw(self._display.scene(now_s), self._options.scale)
+        changed = self._painter.paint(parts)
+        if changed:
+            self._surrounding.present(self._painter.picture, changed)
 
     def _save(self) -> None:
         if self._screenshot is not None:
-            pygame.image.save(self._painter.paint(self._shown), str(self._screenshot))
+            pygame.image.save(self._painter.picture, str(self._screenshot))
             self._screenshot = None
 
 

@@ -27,10 +27,16 @@ from canticle_overlay.view import (
     Rect,
     Shape,
     Text,
-    draw,
     result_text,
     size,
 )
+from canticle_overlay.view import (
+    draw as draw_parts,
+)
+
+
+def draw(scene: Scene, scale: float = 1.0) -> tuple[Shape, ...]:
+    return tuple(shape for part in draw_parts(scene, scale) for shape in part.shapes)
 
 
 @pytest.fixture
@@ -67,6 +73,22 @@ def test_everything_is_inside_the_strip(scene: Scene) -> None:
         for x, y in points(shape):
             assert 0 <= x <= WIDTH
             assert 0 <= y <= HEIGHT
+
+
+@pytest.mark.parametrize("scale", [0.75, 1.0, 1.37, 3.0])
+def test_the_parts_cover_the_strip_and_keep_to_themselves(scene: Scene, scale: float) -> None:
+    edge = 0
+    for part in draw_parts(scene, scale):
+        assert part.left == edge
+        edge += part.width
+        for shape in part.shapes:
+            assert all(part.left <= x <= edge for x, _ in points(shape))
+    assert edge == size(scale)[0]
+
+
+def test_only_the_columns_change_with_the_grip_used(scene: Scene) -> None:
+    before, after = draw_parts(scene), draw_parts(replace(scene, front=0.3))
+    assert [one == other for one, other in zip(before, after, strict=True)] == [True, False, True]
 
 
 @pytest.mark.parametrize("condition", ["no data", "bad data", "learning", "live"])
@@ -197,8 +219,8 @@ def test_without_data_no_old_number_is_left(scene: Scene) -> None:
 def test_results_in_words() -> None:
     assert result_text(Pass(1.0, "late", -12.4, 0.713)) == "12 m late, peak demand 0.71"
     assert result_text(Pass(1.0, "early", 33.0, None)) == "33 m early"
-    assert result_text(Pass(1.0, "on", 6.0, None)) == "in the window, 6 m before the mark"
-    assert result_text(Pass(1.0, "on", -3.0, None)) == "in the window, 3 m after the mark"
+    assert result_text(Pass(1.0, "on", 6.0, None)) == "on, 6 m before the mark"
+    assert result_text(Pass(1.0, "on", -3.0, None)) == "on, 3 m after the mark"
     assert result_text(Pass(None, "not judged", None, 0.5)) == "not judged, peak demand 0.50"
 
 

@@ -7,7 +7,7 @@ import shutil
 import signal
 import subprocess
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from pathlib import Path
 
 import numpy as np
@@ -180,7 +180,7 @@ class FakeSurrounding(PlainWindow):
         super().__init__()
         self.shown = 0
 
-    def present(self, picture: pygame.Surface) -> None:
+    def present(self, picture: pygame.Surface, changed: Sequence[pygame.Rect]) -> None:
         self.shown += 1
 
 
@@ -241,7 +241,8 @@ def test_texts_do_not_run_into_each_other(track: TrackView, condition: str, cue:
     detail = "datagrams come, but are bad" if condition == "no data" else ""
     scene = Scene(condition, detail, 188, ribbon, cue)  # type: ignore[arg-type]
     boxes = []
-    for text in (shape for shape in draw(scene) if isinstance(shape, Text)):
+    shapes = [shape for part in draw(scene) for shape in part.shapes]
+    for text in (shape for shape in shapes if isinstance(shape, Text)):
         width, height = rendered(text.text, text.size, text.color).get_size()
         left = text.x - round({"left": 0.0, "center": 0.5, "right": 1.0}[text.align] * width)
         boxes.append(pygame.Rect(left, text.top, width, height))

@@ -6,6 +6,7 @@ top or lets clicks through is another `Surrounding`, chosen in `choose` by syste
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Protocol
 
 import pygame
@@ -22,8 +23,8 @@ class Surrounding(Protocol):
     def open(self, size: tuple[int, int], position: tuple[int | None, int | None]) -> None:
         """Show an empty window; a position of None is chosen by the module."""
 
-    def present(self, picture: pygame.Surface) -> None:
-        """Put a finished picture of the window's size on the screen."""
+    def present(self, picture: pygame.Surface, changed: Sequence[pygame.Rect]) -> None:
+        """Put a finished picture of the window's size on the screen, or what changed of it."""
 
     def tend(self) -> None:
         """Do what has to be done again now and then, such as staying on top."""

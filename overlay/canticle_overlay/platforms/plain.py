@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Sequence
 
 import pygame
 
@@ -26,11 +27,12 @@ class PlainWindow:
         self._screen = pygame.display.set_mode(size, pygame.NOFRAME)
         pygame.display.set_caption("Canticle")
 
-    def present(self, picture: pygame.Surface) -> None:
-        """Copy the picture to the window."""
+    def present(self, picture: pygame.Surface, changed: Sequence[pygame.Rect]) -> None:
+        """Copy what changed of the picture to the window."""
         if self._screen is not None:
-            self._screen.blit(picture, (0, 0))
-            pygame.display.flip()
+            for box in changed:
+                self._screen.blit(picture, box, box)
+            pygame.display.update(changed)
 
     def tend(self) -> None:
         """Nothing: the window manager decides what is on top."""
