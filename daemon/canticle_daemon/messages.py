@@ -7,6 +7,7 @@ may conflate). Quantities are SI with the unit in the name; NaN is written as nu
 
 from __future__ import annotations
 
+import functools
 from dataclasses import dataclass
 from typing import Any, Literal, TypeAlias
 
@@ -302,16 +303,24 @@ def read_bus_message(message: bytes) -> tuple[str, Any]:
         return name, decoder.decode(payload)
     except msgspec.ValidationError:
         data = msgspec.json.decode(payload)
-        return name, msgspec.convert(_null_as_nan(data, TOPICS[name].payload), decoder.type)
+        return name, msgspec.convert(_null_as_nan(data, name), decoder.type)
 
 
-def _null_as_nan(data: Any, payload: type[Any]) -> Any:
+def _null_as_nan(data: Any, topic: str) -> Any:
     if not isinstance(data, dict):
         return data
-    for field in msgspec.structs.fields(payload):
-        value = data.get(field.encode_name)
-        if field.type is float and value is None and field.encode_name in data:
-            data[field.encode_name] = NAN
-        elif field.type == Wheels and isinstance(value, list):
-            data[field.encode_name] = [NAN if item is None else item for item in value]
+    floats, wheels = _numeric_fields(topic)
+    for name in floats & data.keys():
+        if data[name] is None:
+            data[name] = NAN
+    for name in wheels & data.keys():
+        if isinstance(data[name], list):
+            data[name] = [NAN if item is None else item for item in data[name]]
     return data
+
+
+@functools.cache
+def _numeric_fields(topic: str) -> tuple[frozenset[str], frozenset[str]]:
+    fields = msgspec.structs.fields(TOPICS[topic].payload)
+    floats = frozenset(field.encode_name for field in fields if field.type is float)
+    return floats, frozenset(field.encode_name for field in fields if field.type == Wheels)

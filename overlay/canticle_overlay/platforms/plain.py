@@ -17,7 +17,8 @@ class PlainWindow:
         self._screen: pygame.Surface | None = None
 
     def prepare(self) -> None:
-        """Let the screen saver run; a strip of figures is no film."""
+        """Let the screen saver run, and draw without the graphics card that the game needs."""
+        os.environ.setdefault("SDL_FRAMEBUFFER_ACCELERATION", "0")
         os.environ.setdefault("SDL_VIDEO_ALLOW_SCREENSAVER", "1")
 
     def open(self, size: tuple[int, int], position: tuple[int | None, int | None]) -> None:
