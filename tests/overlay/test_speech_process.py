@@ -16,6 +16,8 @@ from scipy.signal import correlate
 
 from canticle_daemon.coach.phrasing import vocabulary
 from canticle_daemon.messages import Cue, Vocabulary
+from canticle_overlay.speech.engine import VoiceSettings, default_voice
+from canticle_overlay.speech.render import PhraseCache
 
 pytestmark = pytest.mark.io
 
@@ -178,6 +180,24 @@ def test_without_a_sound_device_the_phrases_are_rendered_all_the_same(tmp_path: 
         assert voice.process.stderr is not None
         assert voice.process.stderr.read() == b""
     assert len(list(folder.glob("*.wav"))) == len(PHRASES)
+
+
+def test_a_broken_file_in_the_cache_is_replaced(pcm: Path, tmp_path: Path) -> None:
+    settings = VoiceSettings(default_voice(), 165)
+    file = PhraseCache(tmp_path, settings).path("late")
+    file.write_bytes(b"RIFF, but no sound")
+    with audible(tmp_path, pcm) as voice:
+        voice.repeat_until("vocabulary", Vocabulary(("late",)), "1 phrase in")
+    assert len(clip(tmp_path, "late")) > 4800
+
+
+def test_an_unusable_cache_folder_is_named(pcm: Path, tmp_path: Path) -> None:
+    (tmp_path / "file").write_text("in the way")
+    with audible(tmp_path / "file", pcm) as voice:
+        state = voice.state()
+        assert state["state"] == "unavailable"
+        assert str(tmp_path / "file") in state["detail"]
+        assert voice.process.wait(5) == 0
 
 
 def test_without_a_speech_engine_it_says_so(tmp_path: Path, pcm: Path) -> None:

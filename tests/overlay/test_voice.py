@@ -89,7 +89,8 @@ def test_faults_are_counted_and_a_later_success_clears_them(rig: Rig) -> None:
     rig.speech.learn(("early", "odd"))
     rig.render("late")
     rig.render("early", fault="no answer")
-    rig.render("odd", file="broken.wav")
+    for _ in range(2):
+        rig.render("odd", file="broken.wav")
     assert rig.speech.settled
     assert rig.speech.summary(Path("here")) == (
         "1 phrase in here; 2 could not be rendered: no answer"
@@ -97,6 +98,15 @@ def test_faults_are_counted_and_a_later_success_clears_them(rig: Rig) -> None:
     rig.render("early")
     rig.render("odd")
     assert rig.speech.summary(Path("here")) == "3 phrases in here"
+
+
+def test_a_broken_file_is_rendered_again_once(rig: Rig, tmp_path: Path) -> None:
+    file = tmp_path / "broken.wav"
+    for _ in range(2):
+        file.write_text("no sound")
+        rig.render("late", file=str(file))
+    assert rig.asked == [("late", True)]
+    assert rig.speech.faults == {"late": "broken.wav: cannot be played"}
 
 
 def test_without_a_sound_device_phrases_are_still_rendered() -> None:

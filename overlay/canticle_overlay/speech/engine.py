@@ -45,6 +45,10 @@ DEFAULT_VOICES = {"linux": "en-us+f3"}
 """Where the engine's own voice is hard to understand, the one that is used instead."""
 
 
+ADVICE = "install Canticle again, or your system's espeak-ng"
+"""For a user without an engine; Windows and macOS bring their own."""
+
+
 def default_voice() -> str:
     """Return the voice of a user who chose none; empty for the engine's own."""
     return DEFAULT_VOICES.get(sys.platform, "")
@@ -67,11 +71,15 @@ def serve(pipe: Connection[Reply, Job], settings: VoiceSettings) -> None:
             return
         try:
             speaker = speaker or Speaker(settings)
+        except Exception as error:  # the plug-in boundary: an engine may raise anything
+            pipe.send(f"there is no speech engine ({_said(error)}); {ADVICE}")
+            continue
+        try:
             speaker.render(job)
             pipe.send(None)
-        except Exception as error:  # the plug-in boundary: an engine may raise anything
+        except Exception as error:  # as above
             speaker = None  # set up anew, or a wrong voice would fail only once
-            pipe.send(f"{type(error).__name__}: {error}")
+            pipe.send(f"the speech engine failed ({_said(error)})")
 
 
 class Speaker:
@@ -134,6 +142,10 @@ def load_bundled_library() -> None:
 
     os.environ.setdefault("ESPEAK_DATA_PATH", espeakng_loader.get_data_path())
     ctypes.CDLL(espeakng_loader.get_library_path(), mode=ctypes.RTLD_GLOBAL)
+
+
+def _said(error: Exception) -> str:
+    return f"{type(error).__name__}: {error}" if str(error) else type(error).__name__
 
 
 def _leave_the_terminal_alone() -> None:

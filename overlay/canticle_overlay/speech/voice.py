@@ -63,6 +63,7 @@ class Speech:
         self._clock = clock
         self._late_text: str | None = None
         self._late_until = 0.0
+        self._replaced: set[str] = set()
         self.wanted: set[str] = {FIRST_PHRASE}
         self.done: set[str] = set()
         self.faults: dict[str, str] = {}
@@ -94,6 +95,8 @@ class Speech:
                 self._player.load(result.text, result.path)
             except SystemFaultError as error:
                 fault = str(error)
+                if self._render_again(result):
+                    return
         if fault is not None:
             self.faults[result.text] = fault
             return
@@ -101,6 +104,15 @@ class Speech:
         self.done.add(result.text)
         if result.text == self._late_text and self._clock() < self._late_until:
             self.say(result.text)
+
+    def _render_again(self, broken: Rendered) -> bool:
+        """Have a file replaced that is no sound, such as one from a full disk; only once."""
+        if broken.text in self._replaced:
+            return False
+        self._replaced.add(broken.text)
+        broken.path.unlink(missing_ok=True)
+        self._request([broken.text], urgent=True)
+        return True
 
     @property
     def settled(self) -> bool:
@@ -191,7 +203,7 @@ def _report(
     """Tell the daemon what has changed; return whether the voice has no more to do."""
     if FIRST_PHRASE in speech.faults:
         reason = speech.faults[FIRST_PHRASE]
-        lifeline.say("unavailable", f"no speech engine: cues are shown and logged ({reason})")
+        lifeline.say("unavailable", f"cues are shown and logged, not spoken: {reason}")
         return True
     if FIRST_PHRASE not in speech.done:
         return False
