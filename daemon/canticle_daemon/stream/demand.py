@@ -20,6 +20,7 @@ from canticle_daemon.physics.tire import MAX_UTILIZATION, peak_friction
 from canticle_daemon.stream.bank import GRAVITY_MPS2, Bank
 from canticle_daemon.stream.filters import Derivative
 from canticle_daemon.stream.locate import Located
+from canticle_daemon.track.profile import Track
 
 MIN_SPEED_MPS = 5.0
 MIN_LOAD_SHARE = 0.2
@@ -51,13 +52,14 @@ class DemandStage:
     ----------
     car
         The car file.
-    stand_in
-        Whether a track stands in for missing vertical or longitudinal acceleration.
+    track
+        The track, which stands in for missing vertical or longitudinal acceleration, or None.
     """
 
-    def __init__(self, car: CarFile, *, stand_in: bool) -> None:
+    def __init__(self, car: CarFile, track: Track | None) -> None:
         self._car = car
-        self._stand_in = stand_in
+        self._stand_in = track is not None
+        self._axis_m = 0.0 if track is None else track.file.bank_axis_offset_m
         self._gradient = math.radians(car.roll_gradient_deg_per_g) / GRAVITY_MPS2
         self._yaw_acceleration = Derivative(RATE_TAU_S)
         self._speed_rate = Derivative(RATE_TAU_S)
@@ -111,7 +113,7 @@ class DemandStage:
     def _mapped_normal(
         self, block: FrameBlock, located: Located, bank: Bank, dt_s: FloatArray
     ) -> FloatArray:
-        offset = np.where(np.isfinite(located.lateral_m), located.lateral_m, 0.0)
+        offset = np.where(np.isfinite(located.lateral_m), located.lateral_m, 0.0) - self._axis_m
         roll_rate = self._motion[0].process(bank.map_roll_rad, dt_s)
         roll_acceleration = self._motion[1].process(roll_rate, dt_s)
         offset_rate = self._motion[2].process(offset, dt_s)

@@ -98,7 +98,7 @@ class Pipeline:
         self._continuity = Continuity(length)
         self._locate = Locate(track)
         self._bank = BankStage(track, car)
-        self._demand = DemandStage(car, stand_in=track is not None)
+        self._demand = DemandStage(car, track)
         self._spend = SpendStage(car)
         self._laps = LapStage(length)
         self._corners = (
