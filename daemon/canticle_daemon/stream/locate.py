@@ -17,7 +17,8 @@ class Located:
 
     `station_m` lies on the lap; `lateral_m` is positive left, NaN where not known; `lap` is
     the stream's own where it has one, else counted; `wraps` are the frames that are the first
-    beyond the start line, going forward.
+    beyond the start line, going forward. A car that rolls back over the line and on again, or
+    whose place trembles there, has passed it once.
     """
 
     station_m: FloatArray
@@ -38,11 +39,12 @@ class Locate:
     def __init__(self, track: Track | None) -> None:
         self._track = track
         self._station_m = math.nan
-        self._counted = 1
+        self._counted = self._furthest = 1
 
     def reset(self) -> None:
         """Forget the last place; the count of laps goes on."""
         self._station_m = math.nan
+        self._furthest = self._counted
 
     def process(self, block: FrameBlock) -> Located:
         """Locate every frame of a block."""
@@ -54,10 +56,12 @@ class Locate:
         if self._track is not None:
             crossed = np.where(moved > half_m, -1, crossed)
         counted = self._counted + np.cumsum(crossed)
+        furthest = np.maximum.accumulate(np.concatenate([[self._furthest], counted]))
         self._station_m, self._counted = float(station[-1]), int(counted[-1])
+        self._furthest = int(furthest[-1])
         told = block.lap
         lap = np.where(np.isfinite(told), told, counted).astype(np.int64)
-        return Located(station, lateral, lap, np.flatnonzero(crossed == 1))
+        return Located(station, lateral, lap, np.flatnonzero(counted > furthest[:-1]))
 
     def _place(self, block: FrameBlock) -> tuple[FloatArray, FloatArray]:
         station, lateral = block.station_m, block.lateral_m
