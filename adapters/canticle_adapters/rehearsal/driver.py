@@ -39,6 +39,8 @@ STRAIGHT_LEAD_M = 60.0
 LEAST_RAMP_M = 8.0
 SETTLE_M = 72.0
 MOST_LEVEL = 1.6
+KEPT_SHARE = 0.5
+"""Who has turned in does not open the wheel further than this before the corner is settled."""
 MOST_TURN_RAD = math.radians(15.0)
 
 
@@ -297,6 +299,7 @@ class Driver:
         self._throttle, self._brake = 0.6, 0.0
         self._bell = Bell()
         self._clear_m = 0.0
+        self._settle_m = 0.0
         self._bell_wait_s = self._random.expovariate(self.style.corrections_per_s)
         self._set_hold()
 
@@ -381,6 +384,9 @@ class Driver:
             + known
         )
         self._wheel += STEP_S * rate
+        if way < self._settle_m:
+            kept = KEPT_SHARE * self._target / car.data.steering_ratio
+            self._wheel = max(self._wheel, kept)
         return self._wheel * car.data.steering_ratio + self._correct(way)
 
     def _wheel_for(self, curvature: float, station_m: float) -> float:
@@ -425,6 +431,7 @@ class Driver:
         entry = self._entry(intent)
         self._planner.straight_on(path, math.floor(entry.start_m))
         level = self._planner.settle(path, entry)
+        self._settle_m = float(path.end_m)
         self._target = min(self._wheel_for(level, entry.start_m + 20.0), MOST_TURN_RAD)
         marks, start = intent.marks, intent.start_m
         turn_out = start + marks.arc_end_m - 80.0
