@@ -105,7 +105,9 @@ class Config(Section):
     adapter: dict[str, dict[str, Any]] = {}
 
 
-def load_config(path: Path | None, options: Mapping[str, Any]) -> Config:
+def load_config(
+    path: Path | None, options: Mapping[str, Any], defaults: Mapping[str, Any] | None = None
+) -> Config:
     """Read the file, if any, and let the options win over it.
 
     Parameters
@@ -114,6 +116,8 @@ def load_config(path: Path | None, options: Mapping[str, Any]) -> Config:
         The TOML file; relative paths inside it count from its folder.
     options
         Dotted keys such as ``"input.bind"``; a value of None means not given.
+    defaults
+        The same for what a command would rather have where neither file nor option says.
 
     Raises
     ------
@@ -123,13 +127,19 @@ def load_config(path: Path | None, options: Mapping[str, Any]) -> Config:
     data = {} if path is None else read_toml(path)
     if path is not None:
         _anchor_paths(data, path.parent)
+    for dotted, value in (defaults or {}).items():
+        _put(data, dotted, value, over=False)
     for dotted, value in options.items():
         if value is not None:
-            section, key = dotted.split(".")
-            table = data.setdefault(section, {})
-            if isinstance(table, dict):
-                table[key] = value
+            _put(data, dotted, value, over=True)
     return validate(Config, data, str(path) if path else "options")
+
+
+def _put(data: dict[str, Any], dotted: str, value: Any, *, over: bool) -> None:
+    section, key = dotted.split(".")
+    table = data.setdefault(section, {})
+    if isinstance(table, dict) and (over or key not in table):
+        table[key] = value
 
 
 def read_toml(path: Path) -> dict[str, Any]:

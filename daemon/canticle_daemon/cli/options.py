@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Annotated, Any
 
@@ -54,8 +55,9 @@ def settings(
     overlay: bool | None = None,
     publish: str | None = None,
     sessions: Path | None = None,
+    defaults: Mapping[str, Any] | None = None,
 ) -> Config:
-    """Merge the config file with the options."""
+    """Merge the config file with the options, and with a command's own `defaults`."""
     options: dict[str, Any] = {
         "input.bind": bind,
         "input.adapter": adapter,
@@ -69,4 +71,4 @@ def settings(
         "bus.publish": publish,
         "log.sessions": sessions,
     }
-    return load_config(config, options)
+    return load_config(config, options, defaults)

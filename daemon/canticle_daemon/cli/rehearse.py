@@ -15,6 +15,7 @@ from canticle_daemon.runtime.console import Console
 from canticle_daemon.runtime.setup import gather, running, show_cautions
 from canticle_daemon.runtime.signals import StopRequest
 from canticle_daemon.runtime.supervisor import Child
+from canticle_daemon.runtime.udp import reachable
 
 SENDER = "canticle_adapters.rehearsal"
 TRACK = "track.toml"
@@ -49,15 +50,19 @@ def rehearse(
     session: options.SessionOption = None,
 ) -> None:
     """Drive a synthetic car round a made-up oval and coach it."""
-    _check_pace(pace)
+    check_pace(pace)
     console = Console()
     with as_file(files(SENDER) / TRACK) as own_track:
         parts = gather(
             settings(
-                config, bind=bind or "127.0.0.1:0", adapter=adapter, layout=layout,
-                track=track or own_track, car=car, targets=targets, run_laps=run_laps,
-                voice=voice, overlay=overlay, publish=publish or "tcp://127.0.0.1:0",
-                sessions=sessions,
+                config, bind=bind, adapter=adapter or "json", layout=layout, track=track, car=car,
+                targets=targets, run_laps=run_laps, voice=voice, overlay=overlay,
+                publish=publish, sessions=sessions,
+                defaults={
+                    "input.bind": "127.0.0.1:0",
+                    "bus.publish": "tcp://127.0.0.1:0",
+                    "track.file": own_track,
+                },
             ),
             console,
         )  # fmt: skip
@@ -66,10 +71,12 @@ def rehearse(
         running(parts, session, open_now=True, stop=stop) as daemon,
     ):
         show_cautions(console)
-        port = daemon.port.endpoint
-        console.line(f"rehearsing by UDP on {port}, publishing on {daemon.bus.endpoint}")
-        arguments = ["--to", port, "--bus", daemon.bus.endpoint, "--pace", pace]
-        arguments += ["--seed", str(seed), "--rate", str(rate)]
+        port, bus = daemon.port.endpoint, daemon.bus
+        console.line(f"rehearsing by UDP on {port}, publishing on {bus.endpoint}")
+        if parts.config.track.file != own_track:
+            console.line(f"the car laps its own oval, judged by {parts.config.track.file}")
+        arguments = ["--to", reachable(port), "--bus", reachable(bus.endpoint), "--pace", pace]
+        arguments += ["--seed", str(seed), "--rate", str(rate), "--with-parent"]
         arguments += [] if laps is None else ["--laps", str(laps)]
         arguments += [] if truth is None else ["--truth", str(truth)]
         sender = Child("rehearsal", SENDER, arguments, restart=False)
@@ -80,7 +87,14 @@ def rehearse(
         raise SystemFaultError(f"the rehearsal failed: {sender.last_words or reason}")
 
 
-def _check_pace(pace: str) -> None:
+def check_pace(pace: str) -> None:
+    """Refuse a pace that is none.
+
+    Raises
+    ------
+    ConfigError
+        It is neither a factor nor ``max``.
+    """
     if pace == "max":
         return
     try:

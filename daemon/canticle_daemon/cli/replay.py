@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+import math
 import time
+from collections.abc import Iterator
+from contextlib import ExitStack
 from itertools import islice
 from pathlib import Path
 from typing import Annotated
@@ -11,16 +14,19 @@ import typer
 
 from canticle_daemon.cli import options
 from canticle_daemon.cli.options import settings
-from canticle_daemon.cli.rehearse import _check_pace
+from canticle_daemon.cli.rehearse import check_pace
 from canticle_daemon.runtime.bus import Bus
 from canticle_daemon.runtime.console import Console
 from canticle_daemon.runtime.engine import Engine, Result
 from canticle_daemon.runtime.session import EstimatePublisher, Session
-from canticle_daemon.runtime.setup import gather, start_children
+from canticle_daemon.runtime.setup import Parts, gather, start_children
 from canticle_daemon.runtime.signals import StopRequest
 from canticle_daemon.runtime.supervisor import close_all
 
 BLOCK = 1024
+LONGEST_WAIT_S = 2.0
+"""A longer gap in the recording's clock is not waited for."""
+READER = "recording"
 
 
 def replay(
@@ -42,64 +48,103 @@ def replay(
     sessions: options.SessionsOption = None,
     session: options.SessionOption = None,
 ) -> None:
-    """Put a recorded stream through the same pipeline; at pace max no estimates are published."""
-    _check_pace(pace)
+    """Put a recorded stream through the same pipeline.
+
+    At pace max estimates are published only where --publish asks for them.
+    """
+    check_pace(pace)
     console = Console()
-    fast = pace == "max"
+    # The settings for a live stream name its adapter; a file of native datagrams has its own.
+    own_reader = READER if adapter in (None, "json") else adapter
     parts = gather(
         settings(
-            config, bind=bind, adapter=adapter or "recording", layout=layout, track=track, car=car,
-            targets=targets, run_laps=run_laps, voice=False if voice is None else voice,
-            overlay=False if overlay is None else overlay,
-            publish=publish or "tcp://127.0.0.1:0", sessions=sessions,
+            config, bind=bind, adapter=own_reader, layout=layout, track=track, car=car,
+            targets=targets, run_laps=run_laps, voice=voice, overlay=overlay, publish=publish,
+            sessions=sessions,
+            defaults={
+                "voice.enabled": False,
+                "overlay.enabled": False,
+                "bus.publish": "tcp://127.0.0.1:0",
+            },
         ),
         console,
     )  # fmt: skip
     datagrams = parts.adapter.read(recording)
-    bus = Bus(parts.config.bus.publish)
-    children = start_children(parts, bus.endpoint)
-    try:
-        with StopRequest() as stop:
-            folder = parts.session_folder(session)
-            opened = Session(folder, parts.facts(), None, bus, console)
-            console.line(f"session {folder}")
-            engine = parts.engine()
-            publisher = EstimatePublisher(bus, parts.config.bus.estimate_hz)
-            publishing = not fast or publish is not None
-            started = time.perf_counter()
-            first_s = None
-            reason = "fault"
-            try:
-                while not stop.is_set:
-                    block = list(islice(datagrams, BLOCK if fast else 1))
-                    if not block:
-                        break
-                    result = engine.process(block, [time.perf_counter_ns()] * len(block))
-                    if result is None:
-                        continue
-                    if not fast:
-                        first_s = engine.time_s if first_s is None else first_s
-                        _wait(started + (engine.time_s - first_s) / float(pace), stop)
-                    opened.take(result, publisher if publishing else _say_nothing)
-                reason = stop.reason or "the recording is over"
-            finally:
-                console.close()
-                opened.close(reason, frames=engine.frame_count, bad_datagrams=engine.bad_datagrams)
-            console.line(_summary(engine, time.perf_counter() - started))
-    finally:
-        close_all(children)
-        bus.close()
+    fast = pace == "max"
+    with ExitStack() as stack:
+        stop = stack.enter_context(StopRequest())
+        bus = Bus(parts.config.bus.publish)
+        stack.callback(bus.close)
+        publisher = EstimatePublisher(bus, parts.config.bus.estimate_hz)
+        player = _Player(
+            parts, parts.engine(), stop, None if fast else float(pace),
+            publisher if not fast or publish is not None else None,
+        )  # fmt: skip
+        opened = Session(parts.session_folder(session), parts.facts(), None, bus, console)
+        children = start_children(parts, bus.endpoint)
+        stack.callback(lambda: close_all(children))
+        player.play(datagrams, opened, console)
 
 
-def _wait(until: float, stop: StopRequest) -> None:
-    while not stop.is_set and (left := until - time.perf_counter()) > 0.0:
-        time.sleep(min(left, 0.05))
+class _Player:
+    """Puts datagrams through the engine, as fast as can be or by the stream's own clock."""
 
+    def __init__(
+        self,
+        parts: Parts,
+        engine: Engine,
+        stop: StopRequest,
+        pace: float | None,
+        publisher: EstimatePublisher | None,
+    ) -> None:
+        self._console = parts.console
+        self._engine = engine
+        self._stop = stop
+        self._pace = pace
+        self._publisher = publisher
+        self._due_s = -math.inf
+        self._stream_s = math.nan
 
-def _say_nothing(_result: Result) -> None:
-    """Publish nothing: nobody listens to a replay at full speed."""
+    def play(self, datagrams: Iterator[bytes], session: Session, console: Console) -> None:
+        """Play all, and close the session whatever happens."""
+        engine, started_s, reason = self._engine, time.perf_counter(), "fault"
+        console.line(f"session {session.folder}")
+        try:
+            while not self._stop.is_set:
+                block = list(islice(datagrams, BLOCK if self._pace is None else 1))
+                if not block:
+                    break
+                result = engine.process(block, [time.perf_counter_ns()] * len(block))
+                if result is not None:
+                    self._wait()
+                    session.take(result, self._publish)
+            reason = self._stop.reason or "the recording is over"
+        finally:
+            session.close(
+                reason,
+                frames=engine.frame_count,
+                bad_datagrams=engine.bad_datagrams,
+                bad_fields=engine.adapter.bad_fields,
+            )
+            console.line(self._summary(time.perf_counter() - started_s))
+            console.close()
 
+    def _publish(self, result: Result) -> None:
+        if self._publisher is not None:
+            self._publisher(result)
 
-def _summary(engine: Engine, seconds: float) -> str:
-    bad = f", {engine.bad_datagrams} bad ({engine.fault})" if engine.bad_datagrams else ""
-    return f"{engine.frame_count} frames in {seconds:.1f} s{bad}"
+    def _wait(self) -> None:
+        """Let as much time pass as the stream's clock says, over the pace."""
+        if self._pace is None:
+            return
+        now, step = time.perf_counter(), self._engine.time_s - self._stream_s
+        self._stream_s = self._engine.time_s
+        on_time = 0.0 <= step <= LONGEST_WAIT_S
+        self._due_s = max(self._due_s, now - LONGEST_WAIT_S) + step / self._pace if on_time else now
+        while not self._stop.is_set and (left := self._due_s - time.perf_counter()) > 0.0:
+            time.sleep(min(left, 0.05))
+
+    def _summary(self, seconds: float) -> str:
+        engine = self._engine
+        bad = f", {engine.bad_datagrams} bad ({engine.fault})" if engine.bad_datagrams else ""
+        return f"{engine.frame_count} frames in {seconds:.1f} s{bad}"

@@ -76,9 +76,10 @@ class Daemon:
     _status_due: float = 0.0
     _lost: bool = False
     _paused: bool = False
-    _bad_told: tuple[int, float] = (0, -math.inf)
+    _bad_told: int = 0
     _foreign_told: int = 0
     _newest: Result | None = None
+    _names: tuple[str | None, str | None] = (None, None)
 
     def __post_init__(self) -> None:
         self._keeps_session = self.session is not None
@@ -117,11 +118,29 @@ class Daemon:
         now = time.monotonic()
         if result is None:
             return
+        self.port.confirm()
         if self.session is None:
             self.session = self.open_session()
         self._note_flow(now, before)
         self.session.take(result, self.publisher)
         self._newest = result
+        if not self._keeps_session:
+            self._mind_names(result)
+
+    def _mind_names(self, result: Result) -> None:
+        """Close the session when another car or track comes; the next datagram opens one."""
+        newest = result.frames[-1]
+        names = (newest.car_name or self._names[0], newest.track_name or self._names[1])
+        known, self._names = self._names, names
+        if any(old is not None and old != new for old, new in zip(known, names, strict=True)):
+            self._close_session("the car or the track changed")
+
+    def _close_session(self, reason: str) -> None:
+        assert self.session is not None
+        session, self.session = self.session, None
+        session.close(reason, **self.end_facts())
+        self._newest, self._lost, self._paused = None, False, False
+        self.engine.restart()
 
     def _note_flow(self, now: float, before: float) -> None:
         """Tell of silence that has ended and of a clock that stands still."""
@@ -154,9 +173,7 @@ class Daemon:
             self._lost = True
             self.session.tell(StreamLost(time_s=self.engine.time_s, silence_s=round(silence, 3)))
         if silence > CLOSE_AFTER_S and not self._keeps_session:
-            self.session.close("ten minutes without telemetry", **self.end_facts())
-            self.session, self._newest, self._lost = None, None, False
-            self.engine.restart()
+            self._close_session("ten minutes without telemetry")
 
     def _sender_done(self, now: float) -> bool:
         sender = self.sender
@@ -175,15 +192,16 @@ class Daemon:
         self.console.status(self._status_line(status))
 
     def _tell_faults(self, status: Status) -> None:
-        told, _ = self._bad_told
-        if status.bad_datagrams > told:
-            count = status.bad_datagrams - told
-            self.console.line(f"{count} bad datagram(s) dropped, the newest: {self.engine.fault}")
-            self._bad_told = (status.bad_datagrams, 0.0)
+        count = status.bad_datagrams - self._bad_told
+        if count:
+            plural = "" if count == 1 else "s"
+            self.console.line(f"{count} bad datagram{plural} dropped; newest: {self.engine.fault}")
+            self._bad_told = status.bad_datagrams
         if status.foreign and not self._foreign_told:
-            self.console.line(
-                f"a second sender ({self.port.newest_foreign}) is ignored while the first is alive"
-            )
+            only = self.port.only_from
+            why = "while the first is alive" if only is None else f"(only_from is {only})"
+            who = "a second sender" if only is None else "a sender"
+            self.console.line(f"{who}, {self.port.newest_foreign}, is ignored {why}")
         self._foreign_told = status.foreign
 
     def status(self) -> Status:

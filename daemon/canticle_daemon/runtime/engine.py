@@ -62,6 +62,7 @@ class Engine:
     def restart(self) -> None:
         """Forget all that was learned; a new session begins."""
         self._pipeline = self.new_pipeline()
+        self.adapter.reset()
         self.time_s = math.nan
 
     def process(self, datagrams: Sequence[bytes], received_ns: Sequence[int]) -> Result | None:
@@ -73,8 +74,10 @@ class Engine:
             try:
                 frame = decode(datagram)
             except DecodeError as error:
-                self.bad_datagrams += 1
-                self.fault = str(error)
+                self._refuse(str(error))
+                continue
+            except Exception as error:  # a plug-in's own fault must not stop the daemon either
+                self._refuse(f"adapter {self.adapter.name!r}: {type(error).__name__}: {error}")
                 continue
             if frame is not None:
                 frames.append(frame)
@@ -86,6 +89,10 @@ class Engine:
         outputs = self._pipeline.process(block)
         self.time_s = float(block.time_s[-1])
         return Result(frames, block.received_ns, self._with_cues(outputs.events), outputs.estimates)
+
+    def _refuse(self, fault: str) -> None:
+        self.bad_datagrams += 1
+        self.fault = " ".join(fault.split())
 
     def _with_cues(self, events: list[Event]) -> list[Event]:
         """Put each cue behind the event that called for it."""

@@ -6,6 +6,8 @@ system before it is published, so a killed daemon loses nothing that was reporte
 
 from __future__ import annotations
 
+import contextlib
+import errno
 import os
 import platform
 from datetime import UTC, datetime
@@ -42,17 +44,6 @@ class Recorder:
 
     def __init__(self, folder: Path, facts: dict[str, Any]) -> None:
         self.folder = folder
-        try:
-            folder.mkdir(parents=True, exist_ok=True)
-            if any(folder.iterdir()):
-                raise ConfigError(f"session folder {folder} is not empty; name a new one")
-            self._file = os.open(
-                folder / "events.jsonl", os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_APPEND, 0o644
-            )
-        except OSError as error:
-            raise ConfigError(
-                f"session folder {folder} cannot be made: {error.strerror or error}"
-            ) from error
         self._facts = {
             "version": __version__,
             "python": platform.python_version(),
@@ -60,7 +51,19 @@ class Recorder:
             "started": wall_time(),
             **facts,
         }
-        self._write_facts()
+        try:
+            make_folder(folder)
+            if any(folder.iterdir()):
+                raise ConfigError(f"session folder {folder} is not empty; name a new one")
+            self._write_facts()
+            self._file = os.open(
+                folder / "events.jsonl", os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_APPEND, 0o644
+            )
+        except OSError as error:
+            raise ConfigError(
+                f"session folder {folder} cannot be made: {error.strerror or error}"
+            ) from error
+        self._size = 0
 
     def record(self, event: Event) -> None:
         """Stamp an event and append it.
@@ -71,18 +74,36 @@ class Recorder:
             The disk refused it.
         """
         event.wall_time = wall_time()
+        line = encode(event) + b"\n"
         try:
-            os.write(self._file, encode(event) + b"\n")
+            written = os.write(self._file, line)
+            if written < len(line):
+                raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
         except OSError as error:
+            with contextlib.suppress(OSError):
+                os.ftruncate(self._file, self._size)  # whole lines only
             raise SystemFaultError(
                 f"{self.folder / 'events.jsonl'} cannot be written: {error.strerror or error}"
             ) from error
+        self._size += written
 
     def close(self, **facts: Any) -> None:
-        """Complete `session.json` and let go of the files."""
+        """Complete `session.json` and let go of the files.
+
+        Raises
+        ------
+        SystemFaultError
+            The disk refused it.
+        """
         self._facts |= {"ended": wall_time(), **facts}
-        self._write_facts()
-        os.close(self._file)
+        try:
+            self._write_facts()
+        except OSError as error:
+            raise SystemFaultError(
+                f"{self.folder / 'session.json'} cannot be written: {error.strerror or error}"
+            ) from error
+        finally:
+            os.close(self._file)
 
     def _write_facts(self) -> None:
         """Replace `session.json` in one step, so that no reader ever sees half of it."""
@@ -91,6 +112,23 @@ class Recorder:
         text = msgspec.json.format(msgspec.json.encode(self._facts, enc_hook=str), indent=2)
         partial.write_bytes(text + b"\n")
         partial.replace(path)
+
+
+def make_folder(folder: Path) -> None:
+    """Make a folder and those above it, where they are missing.
+
+    Raises
+    ------
+    ConfigError
+        It cannot be made, or is a file, or takes no files.
+    """
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        reason = "it is a file" if folder.is_file() else error.strerror or str(error)
+        raise ConfigError(f"session folder {folder} cannot be made: {reason}") from error
+    if not os.access(folder, os.W_OK | os.X_OK):
+        raise ConfigError(f"session folder {folder} cannot be written to")
 
 
 def new_session_folder(parent: Path) -> Path:

@@ -68,12 +68,13 @@ class Session:
 
     def close(self, reason: str, **facts: Any) -> None:
         """Write the last event and complete the folder."""
-        self.tell(
-            SessionEnded(
-                time_s=self._time_s, bind=self._bind, publish=self._bus.endpoint, reason=reason
-            )
+        last = SessionEnded(
+            time_s=self._time_s, bind=self._bind, publish=self._bus.endpoint, reason=reason
         )
-        self._recorder.close(reason=reason, **facts)
+        try:
+            self.tell(last)
+        finally:
+            self._recorder.close(reason=reason, **facts)
 
 
 class EstimatePublisher:

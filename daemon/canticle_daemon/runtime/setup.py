@@ -22,11 +22,11 @@ from canticle_daemon.runtime.bus import Bus
 from canticle_daemon.runtime.console import Console
 from canticle_daemon.runtime.daemon import Daemon
 from canticle_daemon.runtime.engine import Engine
-from canticle_daemon.runtime.recorder import new_session_folder
+from canticle_daemon.runtime.recorder import make_folder, new_session_folder
 from canticle_daemon.runtime.session import EstimatePublisher, Session
 from canticle_daemon.runtime.signals import StopRequest
 from canticle_daemon.runtime.supervisor import Child, close_all
-from canticle_daemon.runtime.udp import UdpInput
+from canticle_daemon.runtime.udp import UdpInput, reachable
 from canticle_daemon.stream.corners import Marks
 from canticle_daemon.stream.pipeline import Pipeline
 from canticle_daemon.track.profile import Track
@@ -99,6 +99,7 @@ class Parts:
         parent = self.config.log.sessions or Path(
             platformdirs.user_data_path("canticle", appauthor=False) / "sessions"
         )
+        make_folder(parent)
         return new_session_folder(parent)
 
 
@@ -156,7 +157,10 @@ def running(
             console.line(f"session {folder}")
             return session
 
+        # Without a session to open now, see at least that there will be a place for one.
         session = open_session() if open_now else None
+        if session is None:
+            parts.session_folder(own_session)
         children += start_children(parts, bus.endpoint)
         daemon = Daemon(
             port, bus, engine, console, open_session,
@@ -184,12 +188,12 @@ def start_children(parts: Parts, endpoint: str) -> list[Child]:
         place = []
         if overlay.left_px is not None and overlay.top_px is not None:
             place = ["--left", str(overlay.left_px), "--top", str(overlay.top_px)]
-        arguments = ["--bus", endpoint, "--scale", str(overlay.scale), *place]
+        arguments = ["--bus", reachable(endpoint), "--scale", str(overlay.scale), *place]
         children.append(Child("overlay", "canticle_overlay.window", arguments))
     if voice.enabled:
         arguments = [
-            "--bus", endpoint, "--rate", str(voice.rate_wpm), "--voice", voice.voice,
-            "--volume", str(voice.volume), "--lengths", parts.config.coach.lengths,
+            "--bus", reachable(endpoint), "--rate", str(voice.rate_wpm), "--voice", voice.voice,
+            "--volume", str(voice.volume),
         ]  # fmt: skip
         parts.voice = Child("voice", "canticle_overlay.speech", arguments)
         children.append(parts.voice)

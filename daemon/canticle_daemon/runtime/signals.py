@@ -32,8 +32,11 @@ class StopRequest:
     def __enter__(self) -> StopRequest:
         for name in ("SIGINT", "SIGTERM", "SIGHUP", "SIGBREAK"):
             number = getattr(signal, name, None)
-            if number is not None and threading.current_thread() is threading.main_thread():
-                self._old[number] = signal.signal(number, self._on_signal)
+            if number is None or threading.current_thread() is not threading.main_thread():
+                continue
+            if name == "SIGHUP" and signal.getsignal(number) is signal.SIG_IGN:
+                continue  # started under nohup: the user wants it to outlive the terminal
+            self._old[number] = signal.signal(number, self._on_signal)
         if sys.platform == "win32":
             self._listen_to_console()
         return self

@@ -13,12 +13,19 @@ import json
 import subprocess
 import sys
 import threading
+import time
 from collections.abc import Sequence
 from typing import IO
 
 BACKOFF_S = (1.0, 2.0, 4.0, 8.0, 15.0, 30.0)
-CLOSE_S = 0.5
+STEADY_S = 60.0
+"""A child that ran so long starts again with the shortest pause."""
+END_S = 0.6
+TERMINATE_S = 0.3
+KILL_S = 0.3
 CLOSED_BY_USER = 3
+LINES_PER_S = 50
+LONGEST_LINE = 4096
 
 
 class Child:
@@ -26,6 +33,15 @@ class Child:
 
     Its standard output carries one JSON object a line with `state` and `detail`. It ends with 0
     when it cannot work here and with 3 when the user closed it: then it is left in peace.
+
+    Parameters
+    ----------
+    name, module, arguments
+        What it is called here, and what to run.
+    restart
+        Whether to start it again when it fails.
+    backoff_s
+        Pauses before the first, second, … restart; the last one repeats.
 
     Attributes
     ----------
@@ -38,10 +54,17 @@ class Child:
     """
 
     def __init__(
-        self, name: str, module: str, arguments: Sequence[str], *, restart: bool = True
+        self,
+        name: str,
+        module: str,
+        arguments: Sequence[str],
+        *,
+        restart: bool = True,
+        backoff_s: Sequence[float] = BACKOFF_S,
     ) -> None:
         self.name = name
         self._restart = restart
+        self._backoff_s = backoff_s
         self.state = "starting"
         self.detail = ""
         self.last_words = ""
@@ -68,21 +91,22 @@ class Child:
             with contextlib.suppress(OSError):
                 process.stdin.close()
 
-    def close(self) -> None:
-        """Ask the process to end, and see that it does."""
-        self.ask_to_end()
+    def insist(self, *, kill: bool) -> None:
+        """Terminate the process, or kill it, if it still runs."""
         process = self._process
         if process is not None:
-            for last_resort in (process.terminate, process.kill):
-                with contextlib.suppress(subprocess.TimeoutExpired):
-                    process.wait(CLOSE_S)
-                    break
-                last_resort()
-        self._thread.join(CLOSE_S)
+            with contextlib.suppress(OSError):
+                (process.kill if kill else process.terminate)()
+
+    def join(self, until: float) -> bool:
+        """Wait for the process and its thread until a time of `time.monotonic`."""
+        self._thread.join(max(until - time.monotonic(), 0.0))
+        return not self._thread.is_alive()
 
     def _keep(self) -> None:
         tries = 0
         while not self._stop.is_set():
+            begun = time.monotonic()
             code = self._run_once()
             if self._stop.is_set():
                 break
@@ -92,42 +116,78 @@ class Child:
             if not self._restart:
                 self.state = "failed"
                 return
-            self.state, self.detail = "failed", f"ended with status {code}; starting again"
-            self.restarts += 1
-            self._stop.wait(BACKOFF_S[min(tries, len(BACKOFF_S) - 1)])
+            if time.monotonic() - begun > STEADY_S:
+                tries = 0
+            self._note_failure(code)
+            self._stop.wait(self._backoff_s[min(tries, len(self._backoff_s) - 1)])
             tries += 1
 
-    def _run_once(self) -> int:
+    def _note_failure(self, code: int | None) -> None:
+        how = "could not be started" if code is None else f"ended with status {code}"
+        said = f" ({self.last_words})" if self.last_words else ""
+        self.state, self.detail = "failed", f"{how}{said}; starting again"
+        self.restarts += 1
+
+    def _run_once(self) -> int | None:
+        """Run the process to its end and return its status; None if it did not start."""
         with self._lock:
             if self._stop.is_set():
-                return 0
-            process = subprocess.Popen(
-                self._command, stdin=subprocess.PIPE, stdout=subprocess.PIPE,
-                stderr=subprocess.STDOUT,
-            )  # fmt: skip
+                return None
+            try:
+                process = subprocess.Popen(
+                    self._command, stdin=subprocess.PIPE, stdout=subprocess.PIPE,
+                    stderr=subprocess.STDOUT,
+                )  # fmt: skip
+            except OSError as error:
+                self.last_words = error.strerror or str(error)
+                return None
             self._process = process
         assert process.stdout is not None
-        self._read(process.stdout)
+        assert process.stdin is not None
+        with process.stdout as lines:
+            self._read(lines)
         code = process.wait()
-        process.stdout.close()
         with contextlib.suppress(OSError):
-            if process.stdin is not None:
-                process.stdin.close()
+            process.stdin.close()
         return code
 
     def _read(self, lines: IO[bytes]) -> None:
-        for line in lines:
-            try:
-                said = json.loads(line)
-                self.state = str(said.get("state", self.state))
-                self.detail = str(said.get("detail", ""))
-            except (ValueError, AttributeError):
-                self.last_words = line.decode(errors="replace").strip() or self.last_words
+        """Read what the child says, at a pace at which a flood costs the daemon nothing."""
+        second, count = 0.0, 0
+        while line := lines.readline(LONGEST_LINE):
+            self._hear(line)
+            now = time.monotonic()
+            if now - second >= 1.0:
+                second, count = now, 0
+            count += 1
+            if count >= LINES_PER_S:
+                self._stop.wait(second + 1.0 - now)
+
+    def _hear(self, line: bytes) -> None:
+        try:
+            said = json.loads(line)
+        except (ValueError, RecursionError):
+            said = None
+        if isinstance(said, dict) and isinstance(said.get("state"), str):
+            self.state = said["state"]
+            self.detail = str(said.get("detail", ""))
+        else:
+            self.last_words = line.decode(errors="replace").strip() or self.last_words
 
 
 def close_all(children: Sequence[Child]) -> None:
-    """End all children, side by side."""
+    """End all children, side by side: first ask, then terminate, then kill."""
     for child in children:
         child.ask_to_end()
-    for child in children:
-        child.close()
+    alive = _left(children, END_S)
+    for child in alive:
+        child.insist(kill=False)
+    alive = _left(alive, TERMINATE_S)
+    for child in alive:
+        child.insist(kill=True)
+    _left(alive, KILL_S)
+
+
+def _left(children: Sequence[Child], seconds: float) -> list[Child]:
+    until = time.monotonic() + seconds
+    return [child for child in children if not child.join(until)]

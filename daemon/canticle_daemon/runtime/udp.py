@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import contextlib
 import errno
+import math
 import socket
 import struct
 import sys
 import time
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from ipaddress import ip_address
 
 import psutil
 
@@ -36,6 +38,11 @@ class Datagram:
     received_ns: int
 
 
+def reachable(endpoint: str) -> str:
+    """Return where a program on this machine finds an endpoint that is bound to all addresses."""
+    return endpoint.replace("0.0.0.0", "127.0.0.1").replace("[::]", "[::1]")
+
+
 def parse_address(text: str, what: str) -> Address:
     """Read HOST:PORT; IPv6 hosts in brackets.
 
@@ -45,13 +52,18 @@ def parse_address(text: str, what: str) -> Address:
         The text is no such thing; it names `what`.
     """
     host, colon, port = text.rpartition(":")
-    if not colon or not host or not port.isdecimal() or int(port) > 65_535:
+    number = port.isascii() and port.isdecimal() and len(port) <= 5
+    if not colon or not host or not number or int(port) > 65_535:
         raise ConfigError(f"{what}: {text!r} is not HOST:PORT, for example 127.0.0.1:47800")
     return host.strip("[]"), int(port)
 
 
 class UdpInput:
     """A bound UDP socket.
+
+    The first sender of a datagram that makes sense has the port until it has been silent for
+    `SENDER_ALIVE_S`; what others send meanwhile is counted and ignored. Whether a datagram made
+    sense the caller tells by `confirm`; until then datagrams are handed out one at a time.
 
     Parameters
     ----------
@@ -61,33 +73,61 @@ class UdpInput:
         HOST:PORT of programs that get every raw datagram too.
     only_from
         HOST or HOST:PORT whose datagrams alone are taken.
+    receive_buffer_bytes
+        What to ask of the system.
 
     Attributes
     ----------
+    endpoint
+        HOST:PORT in use.
     dropped
         Datagrams the kernel threw away because its buffer was full (where it tells).
     foreign
-        Datagrams of a second sender, ignored while the first was alive.
+        Datagrams that were ignored because of who sent them.
+    newest_foreign
+        Who sent the newest of them.
+
+    Raises
+    ------
+    ConfigError
+        An address is wrong or the port is in use.
     """
 
     def __init__(
-        self, bind: str, forward: Sequence[str] = (), only_from: str | None = None
+        self,
+        bind: str,
+        forward: Sequence[str] = (),
+        only_from: str | None = None,
+        receive_buffer_bytes: int = RECEIVE_BUFFER_BYTES,
     ) -> None:
-        self._targets = [_resolve(target, "input.forward") for target in forward]
-        self._only_from = only_from
-        self._socket = _bound(_resolve(bind, "input.bind"))
-        self.endpoint = _text_of(self._socket.getsockname())
-        if self._socket.getsockname()[:2] in [target[:2] for target in self._targets]:
-            self._socket.close()
-            raise ConfigError(f"input.forward: {self.endpoint} is the daemon's own port")
-        self._out = socket.socket(self._socket.family, socket.SOCK_DGRAM)
-        self._out.setblocking(False)
+        targets = [_resolve(target, "input.forward") for target in forward]
+        self._only_from = None if only_from is None else _resolve_sender(only_from)
+        self._socket = _bound(_resolve(bind, "input.bind"), receive_buffer_bytes)
+        own = self._socket.getsockname()[:2]
+        self.endpoint = _text_of(own)
+        for target in targets:
+            if _is_own(target, own):
+                self._socket.close()
+                raise ConfigError(f"input.forward: {_text_of(target)} is the daemon's own port")
+        self._targets = [(_sender_socket(target), target) for target in targets]
         self._stamped = self._ask_for_stamps()
+        self._buffer = bytearray(LARGEST_DATAGRAM)
         self._sender: Address | None = None
-        self._sender_seen = -1e9
+        self._sender_seen = -math.inf
+        self._newest: Address | None = None
         self.dropped = 0
         self.foreign = 0
         self.newest_foreign: str | None = None
+
+    @property
+    def receive_buffer_bytes(self) -> int:
+        """Return what the system gave; Linux counts its own bookkeeping in and doubles it."""
+        return self._socket.getsockopt(socket.SOL_SOCKET, socket.SO_RCVBUF)
+
+    @property
+    def only_from(self) -> str | None:
+        """Return whose datagrams alone are taken, if that was asked for."""
+        return None if self._only_from is None else _text_of(self._only_from)
 
     def fileno(self) -> int:
         """Return the descriptor to poll."""
@@ -96,31 +136,44 @@ class UdpInput:
     def close(self) -> None:
         """Let go of the port."""
         self._socket.close()
-        self._out.close()
+        for out, _ in self._targets:
+            out.close()
 
     def drain(self) -> list[Datagram]:
         """Return what waits in the socket, oldest first, without blocking."""
         taken: list[Datagram] = []
         # One offset a wake: kernel stamps are on the wall clock, estimates on the other.
-        offset_ns = time.perf_counter_ns() - time.time_ns()
-        for data, stamp_ns, address in self._receive():
-            for target in self._targets:
+        now_ns = time.perf_counter_ns()
+        offset_ns = now_ns - time.time_ns()
+        now_s = now_ns * 1e-9
+        if now_s - self._sender_seen > SENDER_ALIVE_S:
+            self._sender = None
+        most = MOST_A_WAKE if self._sender is not None else 1
+        for data, stamp_ns, address in self._receive(most):
+            for out, target in self._targets:
                 with contextlib.suppress(OSError):
-                    self._out.sendto(data, target)
-            if self._accept(address):
+                    out.sendto(data, target)
+            if self._accept(address, now_s):
                 received = stamp_ns + offset_ns if stamp_ns else time.perf_counter_ns()
-                taken.append(Datagram(data, received))
+                # A wall clock set back meanwhile must not move a receipt into the future.
+                taken.append(Datagram(data, min(received, time.perf_counter_ns())))
         return taken
 
-    def _receive(self) -> Iterator[tuple[bytes, int, Address]]:
-        for _ in range(MOST_A_WAKE):
+    def confirm(self) -> None:
+        """Say that the newest datagram made sense: its sender has the port now."""
+        if self._sender is None:
+            self._sender, self._sender_seen = self._newest, time.perf_counter()
+
+    def _receive(self, most: int) -> Iterator[tuple[bytes, int, Address]]:
+        view = memoryview(self._buffer)
+        for _ in range(most):
             try:
                 if self._stamped:
-                    data, notes, _, address = self._socket.recvmsg(LARGEST_DATAGRAM, 128)
-                    yield data, self._read_notes(notes), address[:2]
+                    size, notes, _, address = self._socket.recvmsg_into([view], 128)
+                    yield bytes(view[:size]), self._read_notes(notes), address[:2]
                 else:
-                    data, address = self._socket.recvfrom(LARGEST_DATAGRAM)
-                    yield data, 0, address[:2]
+                    size, address = self._socket.recvfrom_into(view)
+                    yield bytes(view[:size]), 0, address[:2]
             except (BlockingIOError, InterruptedError):
                 return
             except OSError as error:
@@ -140,19 +193,15 @@ class UdpInput:
                 self.dropped = _COUNT.unpack_from(data)[0]
         return stamp_ns
 
-    def _accept(self, address: Address) -> bool:
-        if self._only_from is not None and self._only_from not in (address[0], _text_of(address)):
-            return self._refuse(address)
+    def _accept(self, address: Address, now_s: float) -> bool:
         if address == self._sender:
-            self._sender_seen = time.monotonic()
+            self._sender_seen = now_s
             return True
-        now = time.monotonic()
-        if self._sender is not None and now - self._sender_seen < SENDER_ALIVE_S:
-            return self._refuse(address)
-        self._sender, self._sender_seen = address, now
-        return True
-
-    def _refuse(self, address: Address) -> bool:
+        only = self._only_from
+        wanted = only is None or (address[0] == only[0] and only[1] in (0, address[1]))
+        if wanted and self._sender is None:
+            self._newest = address
+            return True
         self.foreign += 1
         self.newest_foreign = _text_of(address)
         return False
@@ -172,19 +221,48 @@ def _resolve(text: str, what: str) -> Address:
     host, port = parse_address(text, what)
     try:
         info = socket.getaddrinfo(host, port, type=socket.SOCK_DGRAM)
-    except OSError as error:
-        raise ConfigError(f"{what}: host {host!r} is not known: {error.strerror}") from error
+    except (OSError, ValueError) as error:  # ValueError: no host name can look like this
+        reason = getattr(error, "strerror", None) or "no such name can be"
+        raise ConfigError(f"{what}: host {host!r} is not known: {reason}") from error
     address = info[0][4]
     return str(address[0]), int(address[1])
 
 
-def _bound(address: Address) -> socket.socket:
-    family = socket.AF_INET6 if ":" in address[0] else socket.AF_INET
-    bound = socket.socket(family, socket.SOCK_DGRAM)
+def _resolve_sender(text: str) -> Address:
+    """Read HOST or HOST:PORT; port 0 stands for any."""
+    bare = text.count(":") != 1 and not text.startswith("[")
+    return _resolve(f"{text}:0" if bare else text, "input.only_from")
+
+
+def _is_own(target: Address, own: Address) -> bool:
+    """Whether a datagram to `target` would come back in at `own`."""
+    if target[1] != own[1]:
+        return False
+    to, at = ip_address(target[0]), ip_address(own[0])
+    return to == at or to.is_unspecified or (at.is_unspecified and _is_local(target[0]))
+
+
+def _is_local(host: str) -> bool:
+    names = (address.address for card in psutil.net_if_addrs().values() for address in card)
+    return ip_address(host).is_loopback or host in names
+
+
+def _family(address: Address) -> socket.AddressFamily:
+    return socket.AF_INET6 if ":" in address[0] else socket.AF_INET
+
+
+def _sender_socket(target: Address) -> socket.socket:
+    out = socket.socket(_family(target), socket.SOCK_DGRAM)
+    out.setblocking(False)
+    return out
+
+
+def _bound(address: Address, buffer_bytes: int) -> socket.socket:
+    bound = socket.socket(_family(address), socket.SOCK_DGRAM)
     try:
         if sys.platform == "win32":
             bound.setsockopt(socket.SOL_SOCKET, socket.SO_EXCLUSIVEADDRUSE, 1)
-        bound.setsockopt(socket.SOL_SOCKET, socket.SO_RCVBUF, RECEIVE_BUFFER_BYTES)
+        bound.setsockopt(socket.SOL_SOCKET, socket.SO_RCVBUF, buffer_bytes)
         bound.bind(address)
         bound.setblocking(False)
     except OSError as error:
