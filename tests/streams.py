@@ -118,14 +118,18 @@ class Drive:
         across = self.speed_mps * heading_rate
         side = np.cos(roll) * across + G * np.sin(roll)
         up = G * np.cos(roll) - np.sin(roll) * across
+        body = np.zeros(count)
+        for _ in range(20):  # the body rolls by what its own accelerometer reads
+            felt = np.cos(body) * side + np.sin(body) * up
+            body = math.radians(1.0) / G * felt
+        side, up = felt, np.cos(body) * up - np.sin(body) * side
         noisy = self.rng.normal
         side = side + noisy(0, 0.1, count)
         up = up + noisy(0, 0.1, count)
-        gradient = math.radians(1.0) / G
         rows = zip(
             (time + self.time0_s).tolist(), station.tolist(), (way // length + 1).tolist(),
             steer.tolist(), side.tolist(), up.tolist(),
-            (yaw_rate + noisy(0, 0.001, count)).tolist(), (roll + gradient * side).tolist(),
+            (yaw_rate + noisy(0, 0.001, count)).tolist(), (roll + body).tolist(),
             strict=True,
         )  # fmt: skip
         return [
@@ -147,9 +151,7 @@ class Drive:
             turning = (way - corner.transition_start_m + 30.0) % length
             reach = (corner.exit_m - corner.transition_start_m) % length + 60.0
             inside = turning < reach
-            level = np.interp(
-                (corner.transition_start_m - 45.0) % length, *self._table(track)
-            )
+            level = np.interp((corner.transition_start_m - 45.0) % length, *self._table(track))
             straight[inside] = level
         wheel += self.dogleg_gain * gain * straight
         for lap in range(-1, self.laps + 1):

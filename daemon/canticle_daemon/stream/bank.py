@@ -21,13 +21,16 @@ import numpy as np
 from canticle_daemon.frame import FloatArray, FrameBlock
 from canticle_daemon.physics.car import CarFile
 from canticle_daemon.physics.road import bank_from_side_force
-from canticle_daemon.stream.filters import FirstOrderLag
+from canticle_daemon.stream.filters import FirstOrderLag, RunningSum
 from canticle_daemon.stream.locate import Located
 from canticle_daemon.track.profile import Track
 
 GRAVITY_MPS2 = 9.81
 ATTITUDE_STD_RAD = math.radians(0.3)
 MAP_STD_RAD = math.radians(1.0)
+SAMPLE_STD_RAD = math.radians(2.0)
+"""What one sample of side force says of the bank, before its noise is known."""
+LEAST_STD_RAD = math.radians(0.2)
 WITH_MAP_TAU_S = 2.0
 ALONE_TAU_S = 0.4
 NOISE_TAU_S = 2.0
@@ -59,13 +62,18 @@ class BankStage:
     def __init__(self, track: Track | None, car: CarFile) -> None:
         self._track = track
         self._gradient = math.radians(car.roll_gradient_deg_per_g) / GRAVITY_MPS2
-        self._correction = FirstOrderLag(ALONE_TAU_S if track is None else WITH_MAP_TAU_S)
+        self._correction = (
+            FirstOrderLag(ALONE_TAU_S) if track is None else FirstOrderLag(WITH_MAP_TAU_S, 0.0)
+        )
+        self._prior_rad = SAMPLE_STD_RAD if track is None else MAP_STD_RAD
         self._scatter = FirstOrderLag(NOISE_TAU_S)
+        self._listened = RunningSum()
 
     def reset(self) -> None:
         """Forget the past."""
         self._correction.reset()
         self._scatter.reset()
+        self._listened.reset()
 
     def process(self, block: FrameBlock, located: Located, dt_s: FloatArray) -> Bank:
         """Estimate the roll of the road for a block."""
@@ -95,6 +103,9 @@ class BankStage:
         away = raw - base
         correction = self._correction.process(away, dt_s)
         scatter = self._scatter.process((away - correction) ** 2, dt_s)
-        share = np.minimum(dt_s / (2.0 * self._correction.tau_s), 1.0)
-        spread = np.sqrt(scatter * np.maximum(share, 1e-4)) + math.radians(0.2)
+        listened_s = self._listened.process(np.where(np.isfinite(away), dt_s, 0.0))
+        tau_s = self._correction.tau_s
+        share = np.minimum(dt_s / (2.0 * tau_s), 1.0)
+        prior = self._prior_rad**2 * np.exp(-2.0 * listened_s / tau_s)
+        spread = np.sqrt(prior + scatter * share + LEAST_STD_RAD**2)
         return base + correction, spread

@@ -20,22 +20,24 @@ class FirstOrderLag:
     ----------
     tau_s
         Time constant, s, positive.
+    start
+        The state before any input; NaN (the default) takes the first finite input, so that
+        there is no transient from 0.
 
     Notes
     -----
-    A NaN input holds the state and gives the held value; before the first finite input the
-    output is NaN. The first finite input starts the state, so there is no transient from 0.
+    A NaN input holds the state and gives the held value.
     """
 
-    def __init__(self, tau_s: float) -> None:
+    def __init__(self, tau_s: float, start: float = math.nan) -> None:
         if not tau_s > 0.0:
             raise ValueError("tau_s must be positive")
         self.tau_s = tau_s
-        self._state = math.nan
+        self._start = self._state = start
 
     def reset(self) -> None:
         """Forget the past."""
-        self._state = math.nan
+        self._state = self._start
 
     def process(self, values: FloatArray, dt_s: FloatArray) -> FloatArray:
         """Filter a block; `dt_s` is the time since the frame before, shape of `values`."""
