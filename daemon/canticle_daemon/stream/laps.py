@@ -18,7 +18,10 @@ NEAR_LINE_M = 3.0
 
 @dataclass(frozen=True, slots=True)
 class Laps:
-    """Energy of each tire since the lap began, shape (4, n), and the laps completed."""
+    """Energy of each tire since the lap began, shape (4, n), and the laps completed.
+
+    The energy is NaN where it could never be computed.
+    """
 
     energy_j: FloatArray
     events: list[LapCompleted]
@@ -69,7 +72,7 @@ class LapStage:
             if wrap < len(block):
                 events.append(self._close(block, located, spend, wrap))
                 begin = wrap
-        return Laps(energy, events)
+        return Laps(np.where(spend.blind, np.nan, energy), events)
 
     def _close(self, block: FrameBlock, located: Located, spend: Spend, wrap: int) -> LapCompleted:
         time_s, line_j = self._at_line(block, located, spend, wrap)
@@ -82,7 +85,7 @@ class LapStage:
             lap_time_s=lap_time if math.isfinite(lap_time) else None,
             valid=math.isfinite(lap_time),
             context="free",
-            tire_energy_j=_four(line_j - self._line_j),
+            tire_energy_j=_four(np.where(spend.blind[wrap], np.nan, line_j - self._line_j)),
             peak_demand=self._peak,
         )
         self._line_s, self._line_j, self._peak = time_s, line_j, math.nan
