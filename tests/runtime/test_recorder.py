@@ -78,18 +78,30 @@ def test_new_folders_of_the_same_second_differ(tmp_path: Path) -> None:
     assert len(names) == 3
 
 
-@pytest.mark.parametrize("fits", [0, 10])
+@pytest.mark.parametrize("fits", [[0], [10, 0]])
 def test_a_full_disk_is_told_and_leaves_whole_lines(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, fits: int
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, fits: list[int]
 ) -> None:
     # write(2): a disk that fills up takes a part of the bytes first, and fails at the next call.
     made = Recorder(tmp_path, {})
     made.record(lost(1.0))
-    write = os.write
-    monkeypatch.setattr(recorder.os, "write", lambda file, data: write(file, data[:fits]))
+    write, left = os.write, list(fits)
+    monkeypatch.setattr(recorder.os, "write", lambda file, data: write(file, data[: left.pop(0)]))
     with pytest.raises(SystemFaultError, match=r"events\.jsonl cannot be written: No space"):
         made.record(lost(2.0))
     monkeypatch.undo()
     made.record(lost(3.0))
     made.close()
     assert [event["time_s"] for event in events_of(tmp_path)] == [1.0, 3.0]
+
+
+def test_a_line_the_disk_takes_in_parts_is_whole(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    made = Recorder(tmp_path, {})
+    write = os.write
+    monkeypatch.setattr(recorder.os, "write", lambda file, data: write(file, data[:7]))
+    made.record(lost(1.0))
+    monkeypatch.undo()
+    made.close()
+    assert [event["time_s"] for event in events_of(tmp_path)] == [1.0]

@@ -79,6 +79,7 @@ class Daemon:
     _bad_told: int = 0
     _foreign_told: int = 0
     _newest: Result | None = None
+    _children_told: set[str] = field(default_factory=set)
     _names: tuple[str | None, str | None] = (None, None)
 
     def __post_init__(self) -> None:
@@ -189,6 +190,7 @@ class Daemon:
         if self.vocabulary is not None:
             self.bus.publish("vocabulary", self.vocabulary)
         self._tell_faults(status)
+        self._tell_children()
         self.console.status(self._status_line(status))
 
     def _tell_faults(self, status: Status) -> None:
@@ -203,6 +205,16 @@ class Daemon:
             who = "a second sender" if only is None else "a sender"
             self.console.line(f"{who}, {self.port.newest_foreign}, is ignored {why}")
         self._foreign_told = status.foreign
+
+    def _tell_children(self) -> None:
+        """Say once of each process that it cannot work, until it works again."""
+        for child in self.children:
+            if child.state == "ready":
+                self._children_told.discard(child.name)
+            elif child.state in ("unavailable", "failed") and child is not self.sender:
+                if child.name not in self._children_told:
+                    self._children_told.add(child.name)
+                    self.console.line(f"{child.name}: {child.detail or child.state}")
 
     def status(self) -> Status:
         """Return the daemon's state."""

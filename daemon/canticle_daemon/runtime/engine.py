@@ -6,6 +6,8 @@ import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
+import numpy as np
+
 from canticle_daemon.adapter_api import Adapter
 from canticle_daemon.coach.judge import Coach
 from canticle_daemon.errors import DecodeError
@@ -86,7 +88,9 @@ class Engine:
             return None
         self.frame_count += len(frames)
         block = FrameBlock.from_frames(frames, times)
-        outputs = self._pipeline.process(block)
+        # A sender's absurd number must not write warnings over the terminal.
+        with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+            outputs = self._pipeline.process(block)
         self.time_s = float(block.time_s[-1])
         return Result(frames, block.received_ns, self._with_cues(outputs.events), outputs.estimates)
 

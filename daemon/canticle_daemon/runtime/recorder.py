@@ -76,16 +76,22 @@ class Recorder:
         event.wall_time = wall_time()
         line = encode(event) + b"\n"
         try:
-            written = os.write(self._file, line)
-            if written < len(line):
-                raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+            self._append(line)
         except OSError as error:
             with contextlib.suppress(OSError):
                 os.ftruncate(self._file, self._size)  # whole lines only
             raise SystemFaultError(
                 f"{self.folder / 'events.jsonl'} cannot be written: {error.strerror or error}"
             ) from error
-        self._size += written
+        self._size += len(line)
+
+    def _append(self, line: bytes) -> None:
+        left = line
+        while left:
+            written = os.write(self._file, left)
+            if not written:
+                raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+            left = left[written:]  # a disk that fills up takes a part, and then says why
 
     def close(self, **facts: Any) -> None:
         """Complete `session.json` and let go of the files.
