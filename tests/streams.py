@@ -10,6 +10,7 @@ import math
 from dataclasses import dataclass, field
 
 import numpy as np
+
 from canticle_daemon.frame import Frame, FrameBlock
 from canticle_daemon.track.profile import Track, TrackFile
 
@@ -48,7 +49,7 @@ def oval_file(
         kink = dogleg * smooth((place - 140.0) / 30.0) * smooth((240.0 - place) / 30.0)
         undone = dogleg * smooth((place - 940.0) / 30.0) * smooth((1040.0 - place) / 30.0)
         bend = arc * smooth((place - 1900.0) / 50.0) if place > 1900.0 else 0.0
-        bend += arc * smooth((330.0 - place) / 60.0) if place < 330.0 else 0.0
+        bend += arc * (1.0 - smooth((place - 300.0) / 100.0)) if place < 400.0 else 0.0
         rows.append((float(station), bank, side * (curve + kink - undone + bend)))
     turned = np.trapezoid([row[2] for row in (*rows, (length, 0, rows[0][2]))], dx=5.0)
     scale = side * 2.0 * math.pi / float(turned)
@@ -95,6 +96,10 @@ class Drive:
     steer: bool = True
     attitude: bool = True
     vertical: bool = True
+    follows: bool = False
+    """Whether yaw rate and forces follow the steering, else the road's curvature."""
+    absent: tuple[tuple[int, str], ...] = ()
+    """Corners (lap, name) in which the wheel is never turned."""
     dogleg_gain: float = 1.25
     dogleg_shift_m: float = 15.0
     time0_s: float = 100.0
@@ -109,9 +114,10 @@ class Drive:
         count = int(self.laps * length / self.speed_mps * self.rate_hz)
         time = np.arange(count) / self.rate_hz
         way = self.speed_mps * time + 0.01
-        steer = self._wheel(way, time)
+        clean = self._wheel(way, time)
+        steer = self._measured(clean, time)
         station = way % length
-        curvature = track.curvature_1pm(station)
+        curvature = clean / (12.0 * 2.79) if self.follows else track.curvature_1pm(station)
         roll = track.roll_rad(station)
         heading_rate = self.speed_mps * curvature
         yaw_rate = heading_rate * np.cos(roll)
@@ -159,8 +165,11 @@ class Drive:
                 self._ramp(wheel, way, lap, corner)
         if self.correction_deg:
             self._corrections(wheel, time)
-        wheel += np.radians(self.drift_dps) * time
-        wheel += self.rng.normal(0.0, math.radians(self.noise_deg), way.size)
+        return wheel
+
+    def _measured(self, clean: np.ndarray, time: np.ndarray) -> np.ndarray:
+        wheel = clean + np.radians(self.drift_dps) * time
+        wheel += self.rng.normal(0.0, math.radians(self.noise_deg), time.size)
         if self.quantum_deg:
             step = math.radians(self.quantum_deg)
             wheel = np.round(wheel / step) * step
@@ -176,6 +185,8 @@ class Drive:
         late = self.rng.normal(-self.mean_margin_m, self.scatter_m)
         slope = math.radians(self.slope_dps) * self.rng.uniform(0.85, 1.15) / self.speed_mps
         height = math.radians(self.height_deg) * self.rng.uniform(0.9, 1.1)
+        if (lap + 1, corner.name) in self.absent:
+            return
         base = lap * length + corner.transition_start_m
         knot = base + late
         leave = base + (corner.exit_m - corner.transition_start_m) % length
