@@ -126,7 +126,7 @@ def load_config(
     """
     data = {} if path is None else read_toml(path)
     if path is not None:
-        _anchor_paths(data, path.parent)
+        _anchor_paths(data, path)
     for dotted, value in (defaults or {}).items():
         _put(data, dotted, value, over=False)
     for dotted, value in options.items():
@@ -158,6 +158,10 @@ def read_toml(path: Path) -> dict[str, Any]:
         raise ConfigError(f"{path}: is not UTF-8 text (byte {error.start})") from error
     except tomllib.TOMLDecodeError as error:
         raise ConfigError(f"{path}: is not valid TOML: {error}") from error
+    except RecursionError as error:
+        raise ConfigError(f"{path}: is not valid TOML: nested too deep") from error
+    except ValueError as error:  # a path with a null character in it
+        raise ConfigError(f"{str(path)!r}: cannot be read: {error}") from error
 
 
 def load_toml(path: Path, model: type[ModelT]) -> ModelT:
@@ -182,7 +186,8 @@ def validate(model: type[ModelT], data: Mapping[str, Any], where: str) -> ModelT
     try:
         return model.model_validate(dict(data))
     except ValidationError as error:
-        raise ConfigError(f"{where}: {'; '.join(_faults(error, model))}") from error
+        told = " ".join("; ".join(_faults(error, model)).split())
+        raise ConfigError(f"{where}: {told}") from error
 
 
 def _faults(error: ValidationError, model: type[BaseModel]) -> Iterator[str]:
@@ -219,9 +224,13 @@ def _model_inside(annotation: object) -> type[BaseModel] | None:
     return next((found for found in inner if found is not None), None)
 
 
-def _anchor_paths(data: dict[str, Any], folder: Path) -> None:
+def _anchor_paths(data: dict[str, Any], path: Path) -> None:
+    """Let relative paths count from the file's own folder."""
     places = (("input", "layout"), ("track", "file"), ("car", "file"))
     for section, key in (*places, ("coach", "targets"), ("log", "sessions")):
         table = data.get(section)
         if isinstance(table, dict) and isinstance(table.get(key), str):
-            table[key] = folder / Path(table[key]).expanduser()
+            try:
+                table[key] = path.parent / Path(table[key]).expanduser()
+            except RuntimeError as error:
+                raise ConfigError(f"{path}: {section}.{key}: no such home folder") from error

@@ -105,6 +105,11 @@ class TrackFile(Section):
                 f"the lap does not close: the curvature turns {turned_deg:.1f}°, not ±360° "
                 f"within {CLOSURE_DEG:g}°"
             )
+        if (turned_deg > 0.0) != (self.direction == "left"):
+            raise ValueError(
+                f"direction is {self.direction!r}, but the curvature (positive left) turns "
+                f"{turned_deg:+.0f}°"
+            )
 
     def _check_corners(self) -> None:
         names = [corner.name for corner in self.corner]
@@ -128,9 +133,18 @@ class TrackFile(Section):
             ahead += step % self.length_m
         if ahead >= self.length_m:
             raise ValueError(f"corner {corner.name!r}: is longer than the lap")
-        for place in places:
-            if not 0.0 <= getattr(corner, place) <= self.length_m:
-                raise ValueError(f"corner {corner.name!r}: {place} is not on the lap")
+        for place in (*places, "target_m"):
+            self._check_on_lap(corner, place, getattr(corner, place))
+        if corner.window_m is not None:
+            for station in corner.window_m:
+                self._check_on_lap(corner, "window_m", station)
+            opens, closes = corner.window_m
+            if opens == closes or (closes - opens) % self.length_m > self.length_m / 2:
+                raise ValueError(f"corner {corner.name!r}: window_m must end after it begins")
+
+    def _check_on_lap(self, corner: CornerFile, place: str, station: float | None) -> None:
+        if station is not None and not 0.0 <= station <= self.length_m:
+            raise ValueError(f"corner {corner.name!r}: {place} is not on the lap")
 
     def _check_order(self, here: CornerFile, following: CornerFile) -> None:
         start = here.transition_start_m
