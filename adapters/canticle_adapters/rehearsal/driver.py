@@ -33,14 +33,13 @@ CAR_LAG_S = 0.36
 TRIM_SHARE = STEP_S / 2.5
 UNDERSTEER = 5.6e-4
 """Front less rear slip angle by side force squared over normal force (tried on this car)."""
+UNDERSTEER_AHEAD_S = 0.15
 PEDAL_SHARE = STEP_S / 0.12
 SLOWING_MPS2 = 4.5
 STRAIGHT_LEAD_M = 60.0
 LEAST_RAMP_M = 8.0
-SETTLE_M = 72.0
+SETTLE_M = 68.0
 MOST_LEVEL = 1.6
-KEPT_SHARE = 0.5
-"""Who has turned in does not open the wheel further than this before the corner is settled."""
 MOST_TURN_RAD = math.radians(15.0)
 
 
@@ -172,6 +171,11 @@ class Path:
             x[i] + part * (x[i + 1] - x[i]),
             w[i] + part * (w[i + 1] - w[i]),
         )
+
+    def curvature(self, station_m: float) -> float:
+        """Return the path's curvature in the surface near a station."""
+        place = int(station_m - self.start_m)
+        return self.curvature_1pm[min(max(place, 0), len(self.curvature_1pm) - 1)]
 
 
 class Planner:
@@ -385,18 +389,26 @@ class Driver:
         )
         self._wheel += STEP_S * rate
         if way < self._settle_m:
-            kept = KEPT_SHARE * self._target / car.data.steering_ratio
-            self._wheel = max(self._wheel, kept)
-        return self._wheel * car.data.steering_ratio + self._correct(way)
+            self._wheel = max(self._wheel, 0.0)  # no countersteering before the car is settled
+        front = self._wheel + self._understeer_at(way)
+        return front * car.data.steering_ratio + self._correct(way)
+
+    def _understeer_at(self, way: float) -> float:
+        ahead = way + UNDERSTEER_AHEAD_S * self._car.vx_mps
+        return self._understeer(self._path.curvature(ahead), ahead)
 
     def _wheel_for(self, curvature: float, station_m: float) -> float:
         """Return the wheel that this driver knows to hold a path of that curvature there."""
+        data = self._car.data
+        turned = curvature * data.wheelbase_m + self._understeer(curvature, station_m)
+        return data.steering_ratio * turned
+
+    def _understeer(self, curvature: float, station_m: float) -> float:
+        """Return what the front wheels must be turned beyond the path's own curvature."""
         car = self._car
-        data = car.data
         side = car.vx_mps * car.vx_mps * curvature
         side += GRAVITY_MPS2 * self._planner.sin_roll(station_m)
-        understeer = UNDERSTEER * side * abs(side) * data.mass_kg / car.normal_n
-        return data.steering_ratio * (curvature * data.wheelbase_m + understeer)
+        return UNDERSTEER * side * abs(side) * car.data.mass_kg / car.normal_n
 
     def _correct(self, way: float) -> float:
         """Return the bell-shaped correction of the moment, and start one when it is due."""
@@ -467,7 +479,7 @@ class Driver:
         wheel = self._level + turned
         if since > half and wheel >= self._target:
             self._phase = Phase.FOLLOW
-            self._wheel = wheel / self._car.data.steering_ratio
+            self._wheel = wheel / self._car.data.steering_ratio - self._understeer_at(way)
         return wheel
 
     def _note(self, way: float, time_s: float) -> None:
