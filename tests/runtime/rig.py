@@ -5,6 +5,7 @@ from __future__ import annotations
 import contextlib
 import json
 import os
+import select
 import signal
 import socket
 import subprocess
@@ -125,6 +126,59 @@ class Canticle:
     @property
     def complaints(self) -> str:
         return self.err.read_text("utf-8")
+
+
+NURSERY = """
+import json, os, sys
+from canticle_daemon.cli.main import entry_point
+for line in sys.stdin:
+    request = json.loads(line)
+    child = os.fork()
+    if child == 0:
+        for number, path in ((0, os.devnull), (1, request["out"]), (2, request["err"])):
+            os.dup2(os.open(path, os.O_RDWR | os.O_CREAT | os.O_TRUNC), number)
+        os.environ.clear()
+        os.environ.update(request["env"])
+        sys.argv = ["canticle", *request["arguments"]]
+        entry_point()
+    print(os.waitstatus_to_exitcode(os.waitpid(child, 0)[1]), flush=True)
+"""
+
+
+class Nursery:
+    """A process that has imported the command and forks for each use of it.
+
+    What a use sees is a process of its own with real streams, without a second of imports.
+    """
+
+    def __init__(self) -> None:
+        self._process = subprocess.Popen(
+            [sys.executable, "-W", "error", "-c", NURSERY],
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+        )
+
+    def __enter__(self) -> Nursery:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self._process.kill()
+        self._process.communicate()
+
+    def run(self, home: Path, *arguments: str | Path) -> tuple[int, str, str]:
+        """Run a command that ends by itself; return status, standard output and error."""
+        out, err = home / "stdout.txt", home / "stderr.txt"
+        request = {
+            "arguments": [*map(str, arguments)], "out": str(out), "err": str(err),
+            "env": environment(home),
+        }  # fmt: skip
+        assert self._process.stdin is not None
+        assert self._process.stdout is not None
+        self._process.stdin.write(json.dumps(request).encode() + b"\n")
+        self._process.stdin.flush()
+        assert select.select([self._process.stdout], [], [], PATIENCE_S)[0], "it does not end"
+        status = int(self._process.stdout.readline())
+        return status, out.read_text("utf-8"), err.read_text("utf-8")
 
 
 class Live(Canticle):

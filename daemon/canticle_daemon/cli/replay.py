@@ -30,7 +30,9 @@ READER = "recording"
 
 
 def replay(
-    recording: Annotated[Path, typer.Argument(help="A .jsonl file of native datagrams.")],
+    recording: Annotated[
+        Path, typer.Argument(metavar="RECORDING", help="A .jsonl file of native datagrams.")
+    ],
     pace: Annotated[
         str, typer.Option("--pace", help="1 is real time; max is as fast as can be.")
     ] = "max",

@@ -30,7 +30,9 @@ class Bus:
     """
 
     def __init__(self, endpoint: str) -> None:
-        if not re.fullmatch(r"tcp://\S+:(\d+|\*)|ipc://\S+|inproc://\S+", endpoint):
+        # A port above 65,535 ZeroMQ would quietly take modulo 65,536.
+        form = re.fullmatch(r"tcp://\S+:(?:(\d{1,5})|\*)|ipc://\S+|inproc://\S+", endpoint)
+        if not form or int(form[1] or 0) > 65_535:
             raise ConfigError(
                 f"bus.publish: {endpoint!r} is not an endpoint such as tcp://127.0.0.1:47801"
             )
