@@ -36,7 +36,7 @@ class Coach:
     settings: CoachSection
     car_length_m: float
     silence: Callable[[], str | None]
-    _details: dict[str, Cue] = field(default_factory=dict)
+    _details: dict[str, tuple[str, str | None]] = field(default_factory=dict)
 
     def phrases(self) -> tuple[str, ...]:
         """Return all that this coach can say here."""
@@ -78,21 +78,21 @@ class Coach:
         withheld = "context" if entry.context != "free" else self._doubt(entry.corner, station, std)
         if withheld is None and self.settings.speak not in ("all", "straights"):
             withheld = f"speak = {self.settings.speak}"
-        late_m = self._past_limit_m(entry.corner, station, to_mark=True)
+        past_mark = self._past_limit_m(entry.corner, station, to_mark=True)
+        # A window may close before the mark: then what counts is how far past its end.
+        late_m = max(past_mark, self._past_limit_m(entry.corner, station, to_mark=False))
         text = late_detail(entry.corner, late_m, self._lengths, self.car_length_m)
-        self._details[entry.corner] = self._cue(entry, "late detail", text, withheld)
+        self._details[entry.corner] = (text, withheld)
 
     def _straight(self, corner: Corner) -> Iterable[Cue]:
         detail = self._details.pop(corner.corner, None)
         if detail is not None:
-            withheld = self.silence() if detail.withheld in (None, "no voice") else detail.withheld
-            yield Cue(
-                time_s=corner.time_s, lap=corner.lap, run=corner.run, kind=detail.kind,
-                text=detail.text, corner=detail.corner, spoken=withheld is None,
-                withheld=withheld,
-            )  # fmt: skip
+            text, withheld = detail
+            if corner.context != "free":
+                withheld = "context"
+            yield self._cue(corner, "late detail", text, withheld)
 
-    def _cue(self, event: TurnIn | Entry, kind: str, text: str, withheld: str | None) -> Cue:
+    def _cue(self, event: TurnIn | Corner, kind: str, text: str, withheld: str | None) -> Cue:
         if withheld is None:
             withheld = self.silence()
         return Cue(
