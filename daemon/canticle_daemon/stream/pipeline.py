@@ -23,13 +23,13 @@ import numpy as np
 from canticle_daemon.frame import BoolArray, FloatArray, FrameBlock, IntArray
 from canticle_daemon.messages import Discontinuity, Estimate, Event
 from canticle_daemon.physics.car import CarFile
-from canticle_daemon.stream.bank import BankStage
-from canticle_daemon.stream.continuity import Continuity
+from canticle_daemon.stream.bank import Bank, BankStage
+from canticle_daemon.stream.continuity import Break, Continuity
 from canticle_daemon.stream.corners import CornerStage, Marks
-from canticle_daemon.stream.demand import DemandStage
-from canticle_daemon.stream.laps import LapStage
-from canticle_daemon.stream.locate import Locate
-from canticle_daemon.stream.spend import SpendStage
+from canticle_daemon.stream.demand import Demand, DemandStage
+from canticle_daemon.stream.laps import Laps, LapStage
+from canticle_daemon.stream.locate import Locate, Located
+from canticle_daemon.stream.spend import Spend, SpendStage
 from canticle_daemon.track.profile import Track
 
 
@@ -62,13 +62,15 @@ class Estimates:
 
     def messages(self, received_ns: IntArray) -> list[Estimate]:
         """Return one bus message a row."""
-        columns = {item.name: getattr(self, item.name).T.tolist() for item in fields(Estimates)}
-        columns["received_ns"] = received_ns.tolist()
-        names = list(columns)
-        return [
-            Estimate(**dict(zip(names, row, strict=True)))
-            for row in zip(*columns.values(), strict=True)
+        columns = [
+            (received_ns if name == "received_ns" else getattr(self, name)).T.tolist()
+            for name in _COLUMNS
         ]
+        return [Estimate(*row) for row in zip(*columns, strict=True)]
+
+
+_COLUMNS = tuple(name for name in Estimate.__struct_fields__ if name != "status")
+"""The columns of a message, in its own order."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -77,6 +79,49 @@ class Outputs:
 
     events: list[Event]
     estimates: Estimates | None
+
+
+@dataclass(frozen=True, slots=True)
+class _Span:
+    """An unbroken part of a block, with what the numeric stages made of it."""
+
+    block: FrameBlock
+    dt_s: FloatArray
+    located: Located
+    bank: Bank
+    demand: Demand
+    spend: Spend
+    laps: Laps
+    cut: Break | None
+
+    def estimates(self, side: float) -> Estimates:
+        """Return the rows of this part."""
+        demand = self.demand
+        return Estimates(
+            time_s=self.block.time_s,
+            lap=self.located.lap,
+            station_m=self.located.station_m,
+            bank_rad=-side * self.bank.roll_rad,
+            bank_std_rad=self.bank.std_rad,
+            demand=demand.demand,
+            side_demand=demand.side,
+            utilization=demand.utilization,
+            front_utilization=demand.front_utilization,
+            rear_utilization=demand.rear_utilization,
+            load_n=demand.load_n,
+            force_n=demand.force_n,
+            sliding_power_w=self.spend.power_w,
+            energy_j=self.laps.energy_j,
+            saturated=demand.saturated,
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class Measured:
+    """A block after the numeric stages: the estimates are there, the events are to come."""
+
+    estimates: Estimates | None
+    spans: tuple[_Span, ...]
 
 
 class Pipeline:
@@ -110,83 +155,83 @@ class Pipeline:
 
     def process(self, block: FrameBlock) -> Outputs:
         """Take in one block of at least one frame."""
+        measured = self.measure(block)
+        return Outputs(self.judge(measured), measured.estimates)
+
+    def measure(self, block: FrameBlock) -> Measured:
+        """Do the first half of `process`: the estimates, which are asked for at once."""
         found = self._continuity.process(block)
-        events: list[Event] = []
         if found.kept.size == 0:
-            return Outputs(events, self._held(len(block)))
+            return Measured(self._held(len(block)), ())
         fresh = block if found.kept.size == len(block) else _pick(block, found.kept)
-        parts: list[Estimates] = []
+        spans: list[_Span] = []
         edges = [0, *(cut.index for cut in found.breaks), len(fresh)]
         for number, (start, stop) in enumerate(pairwise(edges)):
-            if number:
-                cut = found.breaks[number - 1]
+            cut = found.breaks[number - 1] if number else None
+            if cut is not None:
                 self._break()
-                time = float(fresh.time_s[start])
-                events.append(Discontinuity(time_s=time, reason=cut.reason, detail=cut.detail))
             if stop > start:
-                span = fresh.cut(start, stop)
-                parts.append(self._run(span, found.dt_s[start:stop], events))
-        return Outputs(events, self._expanded(parts, found.kept, len(block)))
+                spans.append(self._run(fresh.cut(start, stop), found.dt_s[start:stop], cut))
+        parts = [span.estimates(self._side) for span in spans]
+        return Measured(self._expanded(parts, found.kept, len(block)), tuple(spans))
 
-    def _run(self, block: FrameBlock, dt_s: FloatArray, events: list[Event]) -> Estimates:
+    def judge(self, measured: Measured) -> list[Event]:
+        """Do the second half, once for each `measure` and in its order: the events."""
+        events: list[Event] = []
+        for span in measured.spans:
+            if span.cut is not None:
+                if self._corners is not None:
+                    self._corners.reset()
+                time = float(span.block.time_s[0])
+                cut = span.cut
+                events.append(Discontinuity(time_s=time, reason=cut.reason, detail=cut.detail))
+            found: list[Event] = list(span.laps.events)
+            if self._corners is not None:
+                found += self._corners.process(
+                    span.block, span.located, span.bank, span.demand, span.spend, span.dt_s
+                )
+                found.sort(key=lambda event: event.time_s)
+            events += found
+        return events
+
+    def _run(self, block: FrameBlock, dt_s: FloatArray, cut: Break | None) -> _Span:
         located = self._locate.process(block)
         bank = self._bank.process(block, located, dt_s)
         demand = self._demand.process(block, located, bank, dt_s)
         spend = self._spend.process(block, demand, dt_s)
         laps = self._laps.process(block, located, demand, spend)
-        found: list[Event] = list(laps.events)
-        if self._corners is not None:
-            found += self._corners.process(block, located, bank, demand, spend, dt_s)
-            found.sort(key=lambda event: event.time_s)
-        events += found
-        return Estimates(
-            time_s=block.time_s,
-            lap=located.lap,
-            station_m=located.station_m,
-            bank_rad=-self._side * bank.roll_rad,
-            bank_std_rad=bank.std_rad,
-            demand=demand.demand,
-            side_demand=demand.side,
-            utilization=demand.utilization,
-            front_utilization=demand.front_utilization,
-            rear_utilization=demand.rear_utilization,
-            load_n=demand.load_n,
-            force_n=demand.force_n,
-            sliding_power_w=spend.power_w,
-            energy_j=laps.energy_j,
-            saturated=demand.saturated,
-        )
+        return _Span(block, dt_s, located, bank, demand, spend, laps, cut)
 
     def _break(self) -> None:
-        """Drop all carried state; what was learned of the driver stays."""
+        """Drop the carried state of the numeric stages."""
         self._locate.reset()
         self._bank.reset()
         self._demand.reset()
         self._spend.reset()
         self._laps.reset()
-        if self._corners is not None:
-            self._corners.reset()
 
     def _held(self, count: int) -> Estimates | None:
         """Repeat the last estimate for frames that brought nothing new."""
         if self._last is None:
             return None
-        return self._last.take(np.zeros(count, np.int64))
+        return self._last.take(np.full(count, -1))
 
     def _expanded(self, parts: list[Estimates], kept: IntArray, count: int) -> Estimates:
-        rows = [*([self._last] if self._last is not None else []), *parts]
-        joined = parts[0] if len(rows) == 1 else _joined(rows)
-        lead = 0 if self._last is None else 1
-        if kept.size == count and len(rows) == 1:
-            index = None
-        else:
-            index = lead - 1 + np.searchsorted(kept, np.arange(count), side="right")
-            index = np.maximum(index, 0)
-        self._last = joined.take(np.array([-1]))
-        return joined if index is None else joined.take(index)
+        """Return a row for every frame: a stale one repeats the row before it."""
+        before, joined = self._last, _joined(parts)
+        self._last = joined
+        if kept.size == count:
+            return joined
+        lead = 0
+        if before is not None:
+            joined, lead = _joined([before.take(np.array([-1])), joined]), 1
+        index = lead - 1 + np.searchsorted(kept, np.arange(count), side="right")
+        return joined.take(np.maximum(index, 0))
 
 
 def _joined(parts: list[Estimates]) -> Estimates:
+    if len(parts) == 1:
+        return parts[0]
     return Estimates(
         *(
             np.concatenate([getattr(part, item.name) for part in parts], axis=-1)
