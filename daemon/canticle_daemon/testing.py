@@ -7,6 +7,10 @@ An adapter, built-in or a stranger's, passes when::
     def test_it_keeps_the_contract():
         check_adapter(MyAdapter(), samples)
 
+A stage of the pipeline, or a whole one, passes when `check_stage` returns::
+
+    check_stage(lambda: Pipeline(track, car), frames)
+
 A battery raises AssertionError with a sentence that says what was broken and by what.
 """
 
@@ -15,12 +19,16 @@ from __future__ import annotations
 import copy
 import math
 import random
-from collections.abc import Iterator, Sequence
-from typing import Any
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import fields, is_dataclass
+from typing import Any, Protocol
+
+import msgspec
+import numpy as np
 
 from canticle_daemon.adapter_api import API_VERSION, Adapter
 from canticle_daemon.errors import DecodeError
-from canticle_daemon.frame import FLAGS, SCALARS, WHEEL_FIELDS, Frame
+from canticle_daemon.frame import FLAGS, NAN, SCALARS, WHEEL_FIELDS, Frame, FrameBlock
 
 # --- adapters ---------------------------------------------------------------------------------
 
@@ -232,4 +240,188 @@ def _same(one: Sequence[Frame], other: Sequence[Frame]) -> bool:
     return [dict(_given(frame)) for frame in one] == [dict(_given(frame)) for frame in other]
 
 
-# --- estimators -------------------------------------------------------------------------------
+# --- stages -----------------------------------------------------------------------------------
+
+OFFSET_S = 4096.0
+"""A whole number of every window that a stage may keep by the clock."""
+OFFSET_TOLERANCE = 1e-6
+EVENT_TOLERANCE = 5e-3
+"""With another zero of the clock a frame may fall on the other side of a window's edge."""
+CUTS = 6
+OPTIONAL = tuple(name for name in SCALARS if name not in (*REQUIRED, "station_m"))
+
+
+class Stage(Protocol):
+    """What takes in blocks: a stage of the pipeline, or a chain of them."""
+
+    def process(self, block: FrameBlock) -> Any:
+        """Return a dataclass or mapping of columns (last axis: frames) and lists of events."""
+
+
+def check_stage(make: Callable[[], Stage], frames: Sequence[Frame], *, seed: int = 1) -> None:
+    """Check that a stage keeps the laws of the pipeline.
+
+    It leaves its inputs alone; gives the same again; gives the same to the bit however the
+    stream is cut, and from a deep copy taken anywhere; after `reset`, where it has one, it is
+    as new; the clock's zero does not matter; missing fields, gaps, repeats and a stream that
+    runs backward do not stop it.
+
+    Parameters
+    ----------
+    make
+        Makes a fresh stage.
+    frames
+        A stream that shows what the stage does, a few hundred frames or more.
+    seed
+        Of the cuts.
+
+    Raises
+    ------
+    AssertionError
+        A law is broken; the text says which.
+    """
+    assert (type(make()).__doc__ or "").strip(), f"{type(make()).__name__} has no docstring"
+    chance = random.Random(seed)
+    whole = _run(make(), frames, [len(frames)])
+    _check_untouched(make(), frames)
+    _alike(_run(make(), frames, [len(frames)]), whole, "a second fresh stage")
+    for _ in range(CUTS):
+        sizes = [chance.choice((1, 2, 7, 40, 300)) for _ in range(9)]
+        _alike(_run(make(), frames, sizes), whole, f"blocks of {sizes}")
+    for at in (1, len(frames) // 3, len(frames) - 1):
+        _check_copy(make(), frames, at, whole)
+    _check_reset(make(), frames, whole)
+    later = [msgspec.structs.replace(f, time_s=f.time_s + OFFSET_S) for f in frames]
+    shifted = _run(make(), later, [len(frames)])
+    moved = _clock_moved(shifted, -OFFSET_S)
+    _alike(moved, whole, "another zero of the clock", OFFSET_TOLERANCE, EVENT_TOLERANCE)
+    for what, stream in _mishaps(list(frames)):
+        _check_survives(make(), what, stream)
+
+
+def _run(stage: Stage, frames: Sequence[Frame], sizes: Sequence[int]) -> dict[str, Any]:
+    """Feed a stream in blocks of the sizes over and over; join what comes out."""
+    parts: list[dict[str, Any]] = []
+    start = 0
+    while start < len(frames):
+        stop = start + sizes[len(parts) % len(sizes)]
+        block = FrameBlock.from_frames(frames[start:stop])
+        parts.append(_columns(stage.process(block), len(block)))
+        start = stop
+    return _joined(parts)
+
+
+def _columns(output: Any, count: int, prefix: str = "") -> dict[str, Any]:
+    """Flatten what a stage returned: name to column or to list of events."""
+    found: dict[str, Any] = {}
+    if is_dataclass(output):
+        output = {item.name: getattr(output, item.name) for item in fields(output)}
+    assert isinstance(output, Mapping), f"a stage returned {type(output).__name__}"
+    for name, value in output.items():
+        if isinstance(value, np.ndarray):
+            assert value.shape[-1:] == (count,), f"{name} has shape {value.shape} for {count} rows"
+            found[prefix + name] = value.copy()
+        elif isinstance(value, list):
+            found[prefix + name] = msgspec.to_builtins(value)
+        elif value is not None:
+            found |= _columns(value, count, f"{prefix}{name}.")
+    return found
+
+
+def _joined(parts: Sequence[Mapping[str, Any]]) -> dict[str, Any]:
+    assert all(part.keys() == parts[0].keys() for part in parts), "columns come and go"
+    return {
+        name: [event for part in parts for event in part[name]]
+        if isinstance(first, list)
+        else np.concatenate([part[name] for part in parts], axis=-1)
+        for name, first in parts[0].items()
+    }
+
+
+def _alike(
+    one: Mapping[str, Any],
+    other: Mapping[str, Any],
+    what: str,
+    tol: float = 0.0,
+    loose: float = 0.0,
+) -> None:
+    """Compare columns within `tol`, events within `loose`, both to the bit by default."""
+    assert one.keys() == other.keys(), f"{what} gives other columns"
+    for name, value in one.items():
+        if isinstance(value, list):
+            same = _near(value, other[name], loose)
+        elif value.dtype.kind == "f":
+            same = np.allclose(value, other[name], rtol=tol, atol=tol, equal_nan=True)
+        else:
+            same = np.array_equal(value, other[name])
+        assert same, f"{what} gives another {name}"
+
+
+def _near(one: Any, other: Any, tol: float) -> bool:
+    if isinstance(one, Mapping):
+        return one.keys() == other.keys() and all(_near(one[k], other[k], tol) for k in one)
+    if isinstance(one, list | tuple):
+        alike = (_near(a, b, tol) for a, b in zip(one, other, strict=True))
+        return len(one) == len(other) and all(alike)
+    if isinstance(one, float) and isinstance(other, float):
+        both_nan = one != one and other != other
+        return both_nan or one == other or abs(one - other) <= tol * (1.0 + abs(one))
+    return bool(one == other)
+
+
+def _check_untouched(stage: Stage, frames: Sequence[Frame]) -> None:
+    block = FrameBlock.from_frames(frames)
+    before = block.scalars.copy()
+    stage.process(block)
+    assert np.array_equal(block.scalars, before, equal_nan=True), "the stage writes into its input"
+
+
+def _check_copy(stage: Stage, frames: Sequence[Frame], at: int, whole: Mapping[str, Any]) -> None:
+    first = _run(stage, frames[:at], [at])
+    twin = copy.deepcopy(stage)
+    _run(stage, frames[at:], [len(frames)])  # the original goes on and must not disturb the copy
+    rest = _run(twin, frames[at:], [len(frames)])
+    _alike(_joined([first, rest]), whole, f"a deep copy taken after {at} frames")
+
+
+def _check_reset(stage: Stage, frames: Sequence[Frame], whole: Mapping[str, Any]) -> None:
+    reset = getattr(stage, "reset", None)
+    if reset is not None:
+        _run(stage, frames, [len(frames)])
+        reset()
+        _alike(_run(stage, frames, [len(frames)]), whole, "a stage that was reset")
+
+
+def _clock_moved(result: Mapping[str, Any], by_s: float) -> dict[str, Any]:
+    moved = dict(result)
+    for name, value in result.items():
+        if isinstance(value, list):
+            moved[name] = [event | {"time_s": event["time_s"] + by_s} for event in value]
+        elif name.split(".")[-1] == "time_s":
+            moved[name] = value + by_s
+    return moved
+
+
+def _mishaps(frames: list[Frame]) -> Iterator[tuple[str, list[Frame]]]:
+    middle = len(frames) // 2
+    for name in OPTIONAL:
+        blank = [msgspec.structs.replace(f, **{name: NAN}) for f in frames[middle:]]
+        yield f"{name} missing from the middle on", frames[:middle] + blank
+    bare = [msgspec.structs.replace(f, **dict.fromkeys(OPTIONAL, NAN)) for f in frames]
+    yield "nothing but the required fields", bare
+    gone = msgspec.structs.replace(frames[middle], speed_mps=NAN, yaw_rate_radps=NAN)
+    yield "a required number missing", [*frames[:middle], gone, *frames[middle + 1 :]]
+    yield "a gap", frames[:middle] + frames[middle + 60 :]
+    yield "every frame twice", [frame for frame in frames for _ in range(2)]
+    yield "a stream that runs backward", frames[::-1]
+    yield "a single frame", frames[:1]
+
+
+def _check_survives(stage: Stage, what: str, stream: list[Frame]) -> None:
+    try:
+        _run(stage, stream, [1, 50, 3, len(stream)])
+    except AssertionError:
+        raise
+    except Exception as error:
+        fault = f"{type(error).__name__} ({error})"
+        raise AssertionError(f"{what} raised {fault}") from error
