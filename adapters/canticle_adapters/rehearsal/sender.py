@@ -23,7 +23,8 @@ import zmq
 
 from canticle_adapters.rehearsal.telemetry import Rehearsal, Values
 
-IN_FLIGHT = 128
+IN_FLIGHT = 64
+"""Two thirds of what Linux's default receive buffer holds of our datagrams (measured: 93)."""
 TOPIC = b"estimate "
 PROBE_S = 0.02
 SILENCE_S = 5.0
