@@ -87,7 +87,7 @@ def wheel_loads(
     shift_n = forward_n * height / car.wheelbase_m
     whole_n = np.maximum(normal_n, 0.0)
     front_n = car.front_weight_share * body_n + downforce_front_n - shift_n
-    front_n = np.clip(front_n, 0.0, whole_n)
+    front_n = np.minimum(np.maximum(front_n, 0.0), whole_n)
     rear_n = whole_n - front_n
     moment_nm = side_n * height
     front_share = car.roll_stiffness_front_share
@@ -96,9 +96,12 @@ def wheel_loads(
     left = car.left_weight_share - 0.5
     front_left = front_n * 0.5 + left * (front_n - downforce_front_n) - front_transfer_n
     rear_left = rear_n * 0.5 + left * (rear_n - downforce_rear_n) - rear_transfer_n
-    front_left = np.clip(front_left, 0.0, front_n)
-    rear_left = np.clip(rear_left, 0.0, rear_n)
-    return np.stack([front_left, front_n - front_left, rear_left, rear_n - rear_left])
+    loads = np.empty((4, *normal_n.shape))
+    loads[0] = np.minimum(np.maximum(front_left, 0.0), front_n)
+    loads[2] = np.minimum(np.maximum(rear_left, 0.0), rear_n)
+    np.subtract(front_n, loads[0], out=loads[1])
+    np.subtract(rear_n, loads[2], out=loads[3])
+    return loads
 
 
 def axle_side_forces(

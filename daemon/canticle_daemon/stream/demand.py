@@ -3,7 +3,8 @@
 Specific force in the road's frame times mass, with drag and downforce taken out, is what the
 tires carry; the bank angle is not needed. Where the stream has no vertical acceleration the
 map stands in for it: the normal specific force follows from the road's roll, its rates, and
-the car's motion across the road.
+the car's motion across the road. These rates are followed only over frames that need them, so
+that a stream that has all it needs pays nothing for them.
 """
 
 from __future__ import annotations
@@ -62,8 +63,8 @@ class DemandStage:
         self._axis_m = 0.0 if track is None else track.file.bank_axis_offset_m
         self._gradient = math.radians(car.roll_gradient_deg_per_g) / GRAVITY_MPS2
         self._yaw_acceleration = Derivative(RATE_TAU_S)
-        self._speed_rate = Derivative(RATE_TAU_S)
-        self._motion = [Derivative(RATE_TAU_S) for _ in range(4)]
+        self._speed_rate = Derivative(RATE_TAU_S, forgets=True)
+        self._motion = [Derivative(RATE_TAU_S, forgets=True) for _ in range(4)]
 
     def reset(self) -> None:
         """Forget the past."""
@@ -75,7 +76,7 @@ class DemandStage:
         car = self._car
         forward, side, normal = self._specific_force(block, located, bank, dt_s)
         speed2 = block.speed_mps**2
-        mass = car.mass_kg + np.where(np.isfinite(block.fuel_kg), block.fuel_kg, 0.0)
+        mass = car.mass_kg + np.fmax(block.fuel_kg, 0.0)
         down_front = car.downforce_front_n_per_mps2 * speed2
         down_rear = car.downforce_rear_n_per_mps2 * speed2
         normal_n = mass * normal + down_front + down_rear
@@ -102,19 +103,34 @@ class DemandStage:
         forward = block.accel_x_mps2
         if not self._stand_in:
             return forward, side, normal
-        speed_rate = self._speed_rate.process(block.speed_mps, dt_s)
-        forward = np.where(np.isfinite(forward), forward, speed_rate)
-        mapped = self._mapped_normal(block, located, bank, dt_s)
+        missing = np.isnan(forward)
+        if missing.any():
+            speed = np.where(missing, block.speed_mps, np.nan)
+            forward = np.where(missing, self._speed_rate.process(speed, dt_s), forward)
+        else:
+            self._speed_rate.reset()
         missing = np.isnan(normal)
-        normal = np.where(missing, mapped, normal)
-        side = np.where(missing, (block.accel_y_mps2 - sin * mapped) / cos, side)
+        if missing.any():
+            mapped = self._mapped_normal(block, located, bank, dt_s, missing)
+            normal = np.where(missing, mapped, normal)
+            side = np.where(missing, (block.accel_y_mps2 - sin * mapped) / cos, side)
+        else:
+            for rate in self._motion:
+                rate.reset()
         return forward, side, normal
 
     def _mapped_normal(
-        self, block: FrameBlock, located: Located, bank: Bank, dt_s: FloatArray
+        self,
+        block: FrameBlock,
+        located: Located,
+        bank: Bank,
+        dt_s: FloatArray,
+        missing: BoolArray,
     ) -> FloatArray:
-        offset = np.where(np.isfinite(located.lateral_m), located.lateral_m, 0.0) - self._axis_m
-        roll_rate = self._motion[0].process(bank.map_roll_rad, dt_s)
+        """Return the normal specific force where it is missing; elsewhere it is not defined."""
+        known = np.where(np.isfinite(located.lateral_m), located.lateral_m, 0.0)
+        offset = np.where(missing, known - self._axis_m, np.nan)
+        roll_rate = self._motion[0].process(np.where(missing, bank.map_roll_rad, np.nan), dt_s)
         roll_acceleration = self._motion[1].process(roll_rate, dt_s)
         offset_rate = self._motion[2].process(offset, dt_s)
         offset_acceleration = self._motion[3].process(offset_rate, dt_s)
@@ -127,7 +143,10 @@ class DemandStage:
     def _streamed_loads(
         self, block: FrameBlock, modeled: FloatArray, defined: BoolArray
     ) -> FloatArray:
-        if all(frame.wheel_load_n is None for frame in block.frames):
+        for frame in block.frames:
+            if frame.wheel_load_n is not None:
+                break
+        else:
             return modeled
         streamed = np.maximum(block.wheels("wheel_load_n"), 0.0)
         total = streamed[0] + streamed[1] + streamed[2] + streamed[3]
@@ -161,9 +180,11 @@ def _demand(
     load_front, load_rear = load[0] + load[1], load[2] + load[3]
     asked = demand * (load_front + load_rear) / (grip_front + grip_rear)
     front, rear = axles
-    axle_force = np.stack([front, front, rear, rear])
-    axle_load = np.stack([load_front, load_front, load_rear, load_rear])
-    force = axle_force * load / np.maximum(axle_load, 1.0)
+    force = np.empty_like(load)
+    np.multiply(front, load[:2], out=force[:2])
+    np.multiply(rear, load[2:], out=force[2:])
+    force[:2] /= np.maximum(load_front, 1.0)
+    force[2:] /= np.maximum(load_rear, 1.0)
     return Demand(
         demand=demand,
         side=side_n / normal_n,

@@ -26,13 +26,15 @@ class FirstOrderLag:
 
     Notes
     -----
-    A NaN input holds the state and gives the held value.
+    A NaN input holds the state and gives the held value; with `forgets` it drops the state
+    instead and gives NaN.
     """
 
-    def __init__(self, tau_s: float, start: float = math.nan) -> None:
+    def __init__(self, tau_s: float, start: float = math.nan, *, forgets: bool = False) -> None:
         if not tau_s > 0.0:
             raise ValueError("tau_s must be positive")
         self.tau_s = tau_s
+        self._forgets = forgets
         self._start = self._state = start
 
     def reset(self) -> None:
@@ -46,6 +48,8 @@ class FirstOrderLag:
         for value, dt in zip(values.tolist(), dt_s.tolist(), strict=True):
             if value == value:  # not NaN
                 state = state + (value - state) * dt / (tau + dt) if state == state else value
+            elif self._forgets:
+                state = value
             out.append(state)
         self._state = state
         return np.array(out, dtype=np.float64)
@@ -58,10 +62,12 @@ class Derivative:
     ----------
     tau_s
         Time constant, s, positive; noise falls and delay grows with it.
+    forgets
+        Whether a missing value drops the past; else the lagged signal is held over it.
     """
 
-    def __init__(self, tau_s: float) -> None:
-        self._lag = FirstOrderLag(tau_s)
+    def __init__(self, tau_s: float, *, forgets: bool = False) -> None:
+        self._lag = FirstOrderLag(tau_s, forgets=forgets)
 
     def reset(self) -> None:
         """Forget the past."""
