@@ -116,10 +116,10 @@ class _Player:
                 block = list(islice(datagrams, BLOCK if self._pace is None else 1))
                 if not block:
                     break
-                result = engine.process(block, [time.perf_counter_ns()] * len(block))
+                received_ns = [time.perf_counter_ns()] * len(block)
+                result = engine.process(block, received_ns, self._take_early)
                 if result is not None:
-                    self._wait()
-                    session.take(result, self._publish)
+                    session.take(result)
             reason = self._stop.reason or "the recording is over"
         finally:
             session.close(
@@ -131,7 +131,8 @@ class _Player:
             console.line(self._summary(time.perf_counter() - started_s))
             console.close()
 
-    def _publish(self, result: Result) -> None:
+    def _take_early(self, result: Result) -> None:
+        self._wait()
         if self._publisher is not None:
             self._publisher(result)
 

@@ -114,19 +114,26 @@ class Daemon:
             return
         before = self.engine.time_s
         result = self.engine.process(
-            [datagram.data for datagram in taken], [datagram.received_ns for datagram in taken]
+            [datagram.data for datagram in taken],
+            [datagram.received_ns for datagram in taken],
+            self._take_early,
         )
         now = time.monotonic()
         if result is None:
             return
-        self.port.confirm()
-        if self.session is None:
-            self.session = self.open_session()
+        assert self.session is not None
         self._note_flow(now, before)
-        self.session.take(result, self.publisher)
+        self.session.take(result)
         self._newest = result
         if not self._keeps_session:
             self._mind_names(result)
+
+    def _take_early(self, result: Result) -> None:
+        """Publish the estimates, before the events of the same datagrams are looked for."""
+        self.port.confirm()
+        if self.session is None:
+            self.session = self.open_session()
+        self.publisher(result)
 
     def _mind_names(self, result: Result) -> None:
         """Close the session when another car or track comes; the next datagram opens one."""

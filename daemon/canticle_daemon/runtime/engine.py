@@ -67,8 +67,16 @@ class Engine:
         self.adapter.reset()
         self.time_s = math.nan
 
-    def process(self, datagrams: Sequence[bytes], received_ns: Sequence[int]) -> Result | None:
-        """Take in datagrams; None when no frame was in them."""
+    def process(
+        self,
+        datagrams: Sequence[bytes],
+        received_ns: Sequence[int],
+        early: Callable[[Result], None] | None = None,
+    ) -> Result | None:
+        """Take in datagrams; None when no frame was in them.
+
+        `early` gets the result as soon as its estimates are there, before its events are.
+        """
         frames: list[Frame] = []
         times: list[int] = []
         decode = self.adapter.decode
@@ -88,11 +96,16 @@ class Engine:
             return None
         self.frame_count += len(frames)
         block = FrameBlock.from_frames(frames, times)
+        self.time_s = float(block.time_s[-1])
         # A sender's absurd number must not write warnings over the terminal.
         with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-            outputs = self._pipeline.process(block)
-        self.time_s = float(block.time_s[-1])
-        return Result(frames, block.received_ns, self._with_cues(outputs.events), outputs.estimates)
+            measured = self._pipeline.measure(block)
+            result = Result(frames, block.received_ns, [], measured.estimates)
+            if early is not None:
+                early(result)
+            events = self._pipeline.judge(measured)
+        result.events.extend(self._with_cues(events))
+        return result
 
     def _refuse(self, fault: str) -> None:
         self.bad_datagrams += 1

@@ -6,7 +6,6 @@ An event is recorded, then published, then shown; an estimate is only published.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
@@ -60,9 +59,8 @@ class Session:
         self._bus.publish(topic_of(event), event)
         self._console.event(event)
 
-    def take(self, result: Result, publish: Callable[[Result], None]) -> None:
-        """Tell the result of one wake: estimates first, for they are asked for at once."""
-        publish(result)
+    def take(self, result: Result) -> None:
+        """Tell the events of one wake."""
         for event in result.events:
             self.tell(event)
 
