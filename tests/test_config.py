@@ -49,6 +49,13 @@ def test_an_option_wins_over_the_file_and_the_file_over_the_default(tmp_path: Pa
     assert config.coach.run_laps == 40
 
 
+def test_a_command_s_own_default_gives_way_to_file_and_option(tmp_path: Path) -> None:
+    path = written(tmp_path, '[driver]\nname = "Ann"\n')
+    preset = {"driver.name": "Bea", "coach.run_laps": 12, "voice.volume": 0.5}
+    config = load_config(path, {"voice.volume": 0.3}, preset)
+    assert (config.driver.name, config.coach.run_laps, config.voice.volume) == ("Ann", 12, 0.3)
+
+
 def test_paths_in_a_file_count_from_its_folder(tmp_path: Path) -> None:
     path = written(
         tmp_path,
