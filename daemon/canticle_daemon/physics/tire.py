@@ -130,7 +130,11 @@ def utilization(force_n: Values, load_n: Values, tire: TireFile) -> FloatArray:
 
 
 def sliding_power_w(
-    force_n: Values, load_n: Values, speed_mps: Values, tire: TireFile
+    force_n: Values,
+    load_n: Values,
+    speed_mps: Values,
+    tire: TireFile,
+    friction: FloatArray | None = None,
 ) -> FloatArray:
     """Return the power that one tire spends in sliding: force × speed × tan(slip).
 
@@ -144,6 +148,8 @@ def sliding_power_w(
         Speed along the wheel's plane.
     tire
         The ``[tire]`` table of the car file.
+    friction
+        Peak friction at this load, where it is known already.
 
     Returns
     -------
@@ -156,7 +162,8 @@ def sliding_power_w(
     millimeters of tread (A. Schallamach, D. M. Turner, Wear 3:1-25, 1960, give the square law
     of its small-force end; from memory).
     """
-    friction = peak_friction(tire, load_n)
+    if friction is None:
+        friction = peak_friction(tire, load_n)
     used = _used_share(force_n, friction * load_n)
     tangent = slip_tangent(used, friction, tire.cornering_stiffness_per_load)
     loaded = np.asarray(load_n) > 0.0

@@ -7,8 +7,10 @@ Three sources, best first:
    or is smoothed where there is no map;
 3. the map alone.
 
-Body roll and road roll cannot be told apart by one accelerometer (J. Ryu, J. C. Gerdes,
-American Control Conference 2004); the split here rests on the car file's roll gradient.
+The second is followed only over frames that need it, and trusts the map anew after a frame
+that did not. Body roll and road roll cannot be told apart by one accelerometer (J. Ryu,
+J. C. Gerdes, American Control Conference 2004); the split here rests on the car file's roll
+gradient.
 """
 
 from __future__ import annotations
@@ -18,10 +20,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from canticle_daemon.frame import FloatArray, FrameBlock
+from canticle_daemon.frame import BoolArray, FloatArray, FrameBlock
 from canticle_daemon.physics.car import CarFile
 from canticle_daemon.physics.road import bank_from_side_force
-from canticle_daemon.stream.filters import FirstOrderLag, RunningSum
+from canticle_daemon.stream.filters import FirstOrderLag, Stopwatch
 from canticle_daemon.stream.locate import Located
 from canticle_daemon.track.profile import Track
 
@@ -62,12 +64,11 @@ class BankStage:
     def __init__(self, track: Track | None, car: CarFile) -> None:
         self._track = track
         self._gradient = math.radians(car.roll_gradient_deg_per_g) / GRAVITY_MPS2
-        self._correction = (
-            FirstOrderLag(ALONE_TAU_S) if track is None else FirstOrderLag(WITH_MAP_TAU_S, 0.0)
-        )
+        tau_s, start = (ALONE_TAU_S, math.nan) if track is None else (WITH_MAP_TAU_S, 0.0)
+        self._correction = FirstOrderLag(tau_s, start, forgets=True)
         self._prior_rad = SAMPLE_STD_RAD if track is None else MAP_STD_RAD
-        self._scatter = FirstOrderLag(NOISE_TAU_S)
-        self._listened = RunningSum()
+        self._scatter = FirstOrderLag(NOISE_TAU_S, forgets=True)
+        self._listened = Stopwatch()
 
     def reset(self) -> None:
         """Forget the past."""
@@ -80,8 +81,11 @@ class BankStage:
         mapped = self._mapped(located)
         body = self._gradient * block.accel_y_mps2
         attitude = block.roll_rad - body
-        inferred, spread = self._from_force(block, body, mapped, dt_s)
         known = np.isfinite(attitude)
+        if known.all():
+            self.reset()
+            return Bank(attitude, np.full_like(attitude, ATTITUDE_STD_RAD), mapped)
+        inferred, spread = self._from_force(block, body, mapped, dt_s, ~known)
         roll = np.where(known, attitude, np.where(np.isfinite(inferred), inferred, mapped))
         std = np.where(known, ATTITUDE_STD_RAD, np.where(np.isfinite(spread), spread, MAP_STD_RAD))
         return Bank(roll, np.where(np.isfinite(roll), std, np.nan), mapped)
@@ -92,18 +96,24 @@ class BankStage:
         return self._track.roll_rad(located.station_m)
 
     def _from_force(
-        self, block: FrameBlock, body: FloatArray, mapped: FloatArray, dt_s: FloatArray
+        self,
+        block: FrameBlock,
+        body: FloatArray,
+        mapped: FloatArray,
+        dt_s: FloatArray,
+        wanted: BoolArray,
     ) -> tuple[FloatArray, FloatArray]:
+        """Return roll and standard error where they are wanted; elsewhere they mean nothing."""
         side = np.cos(body) * block.accel_y_mps2
         side -= np.sin(body) * np.where(
             np.isfinite(block.accel_z_mps2), block.accel_z_mps2, GRAVITY_MPS2
         )
         raw = bank_from_side_force(side, block.speed_mps, block.yaw_rate_radps)
         base = np.where(np.isfinite(mapped), mapped, 0.0)
-        away = raw - base
+        away = np.where(wanted, raw - base, np.nan)
         correction = self._correction.process(away, dt_s)
         scatter = self._scatter.process((away - correction) ** 2, dt_s)
-        listened_s = self._listened.process(np.where(np.isfinite(away), dt_s, 0.0))
+        listened_s = self._listened.process(np.isfinite(away), dt_s)
         tau_s = self._correction.tau_s
         share = np.minimum(dt_s / (2.0 * tau_s), 1.0)
         prior = self._prior_rad**2 * np.exp(-2.0 * listened_s / tau_s)

@@ -33,7 +33,8 @@ RATE_TAU_S = 0.08
 class Demand:
     """Friction asked for. Whole-car and axle figures have shape (n,), tires (4, n).
 
-    `side` is positive to the left; `force_n` are magnitudes; all are NaN where not defined.
+    `side` is positive to the left; `force_n` are magnitudes; `friction` is the peak;
+    all are NaN where not defined.
     """
 
     demand: FloatArray
@@ -44,6 +45,7 @@ class Demand:
     rear_utilization: FloatArray
     load_n: FloatArray
     force_n: FloatArray
+    friction: FloatArray
 
 
 class DemandStage:
@@ -175,7 +177,8 @@ def _demand(
     car: CarFile,
 ) -> Demand:
     demand = np.hypot(forward_n, side_n) / normal_n
-    grip = peak_friction(car.tire, load) * load
+    friction = peak_friction(car.tire, load)
+    grip = friction * load
     grip_front, grip_rear = grip[0] + grip[1], grip[2] + grip[3]
     load_front, load_rear = load[0] + load[1], load[2] + load[3]
     asked = demand * (load_front + load_rear) / (grip_front + grip_rear)
@@ -194,4 +197,5 @@ def _demand(
         rear_utilization=np.minimum(rear / np.maximum(grip_rear, 1.0), MAX_UTILIZATION),
         load_n=load,
         force_n=force,
+        friction=friction,
     )

@@ -10,7 +10,7 @@ import math
 
 import numpy as np
 
-from canticle_daemon.frame import FloatArray
+from canticle_daemon.frame import BoolArray, FloatArray
 
 
 class FirstOrderLag:
@@ -26,8 +26,8 @@ class FirstOrderLag:
 
     Notes
     -----
-    A NaN input holds the state and gives the held value; with `forgets` it drops the state
-    instead and gives NaN.
+    A NaN input holds the state and gives the held value; with `forgets` it gives `start` and
+    begins again there.
     """
 
     def __init__(self, tau_s: float, start: float = math.nan, *, forgets: bool = False) -> None:
@@ -49,7 +49,7 @@ class FirstOrderLag:
             if value == value:  # not NaN
                 state = state + (value - state) * dt / (tau + dt) if state == state else value
             elif self._forgets:
-                state = value
+                state = self._start
             out.append(state)
         self._state = state
         return np.array(out, dtype=np.float64)
@@ -101,6 +101,27 @@ class Hold:
         filled = np.where(index < 0, self._last, values[index])
         self._last = float(filled[-1])
         return filled
+
+
+class Stopwatch:
+    """The time for which something has been so without a break."""
+
+    def __init__(self) -> None:
+        self._elapsed_s = 0.0
+
+    def reset(self) -> None:
+        """Start again from zero."""
+        self._elapsed_s = 0.0
+
+    def process(self, runs: BoolArray, dt_s: FloatArray) -> FloatArray:
+        """Return the time at each frame; where it does not run it is back at zero."""
+        elapsed = self._elapsed_s
+        out = []
+        for running, dt in zip(runs.tolist(), dt_s.tolist(), strict=True):
+            elapsed = elapsed + dt if running else 0.0
+            out.append(elapsed)
+        self._elapsed_s = elapsed
+        return np.array(out, dtype=np.float64)
 
 
 class RunningSum:

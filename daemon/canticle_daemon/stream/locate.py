@@ -49,19 +49,26 @@ class Locate:
     def process(self, block: FrameBlock) -> Located:
         """Locate every frame of a block."""
         station, lateral = self._place(block)
-        before = np.concatenate([[self._station_m], station[:-1]])
+        moved = np.empty_like(station)
+        moved[0] = station[0] - self._station_m
+        np.subtract(station[1:], station[:-1], out=moved[1:])
         half_m = 100.0 if self._track is None else self._track.length_m / 2
-        moved = station - before
-        crossed = np.where(moved < -half_m, 1, 0)
+        walk = np.empty(station.size + 1, np.int64)
+        counted = walk[1:]
+        np.less(moved, -half_m, out=counted, casting="unsafe")
         if self._track is not None:
-            crossed = np.where(moved > half_m, -1, crossed)
-        counted = self._counted + np.cumsum(crossed)
-        furthest = np.maximum.accumulate(np.concatenate([[self._furthest], counted]))
+            counted -= moved > half_m
+        np.add.accumulate(counted, out=counted)
+        counted += self._counted
+        walk[0] = self._furthest
+        furthest = np.maximum.accumulate(walk)
         self._station_m, self._counted = float(station[-1]), int(counted[-1])
         self._furthest = int(furthest[-1])
         told = block.lap
-        lap = np.where(np.isfinite(told), told, counted).astype(np.int64)
-        return Located(station, lateral, lap, np.flatnonzero(counted > furthest[:-1]))
+        known = np.isfinite(told)
+        lap = told if known.all() else np.where(known, told, counted)
+        wraps = (counted > furthest[:-1]).nonzero()[0]
+        return Located(station, lateral, lap.astype(np.int64), wraps)
 
     def _place(self, block: FrameBlock) -> tuple[FloatArray, FloatArray]:
         station, lateral = block.station_m, block.lateral_m
@@ -72,4 +79,7 @@ class Locate:
             mapped, offset = track.locate(block.pos_x_m, block.pos_y_m)
             station = np.where(np.isfinite(station), station, mapped)
             lateral = np.where(np.isfinite(lateral), lateral, offset)
-        return np.where(station < 0.0, station + track.length_m, station) % track.length_m, lateral
+        behind = station < 0.0
+        if behind.any():
+            station = np.where(behind, station + track.length_m, station)
+        return station % track.length_m, lateral

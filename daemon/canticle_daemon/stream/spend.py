@@ -52,7 +52,9 @@ class SpendStage:
 
     def process(self, block: FrameBlock, demand: Demand, dt_s: FloatArray) -> Spend:
         """Add a block to the account; frames without a demand spend nothing."""
-        power = sliding_power_w(demand.force_n, demand.load_n, block.speed_mps, self._tire)
+        power = sliding_power_w(
+            demand.force_n, demand.load_n, block.speed_mps, self._tire, demand.friction
+        )
         known = np.where(np.isfinite(power), power, 0.0)
         before = np.concatenate([self._last_w, known[:, :-1]], axis=1)
         self._last_w = known[:, -1:].copy()
