@@ -26,6 +26,10 @@ class RecordingAdapter(JsonAdapter):
 
     name = "recording"
 
+    def read(self, path: Path) -> Iterator[bytes]:
+        """Return the datagrams of a file of JSON lines; see `read_datagrams`."""
+        return read_datagrams(path)
+
 
 def read_datagrams(path: Path) -> Iterator[bytes]:
     """Return the datagrams of a recording, read as they are asked for.

@@ -99,6 +99,7 @@ class TurnIn(LapEvent, tag="turn_in"):
     margin_s: float
     verdict: Verdict
     target_source: TargetSource
+    context: Context
     detection_delay_s: float
 
 

@@ -37,7 +37,8 @@ def turn_in(station: float, verdict: str, std: float = 0.5, **more: Any) -> Turn
         "time_s": 105.0, "lap": 2, "run": 1, "corner": "Turn 1", "turn_in_station_m": station,
         "turn_in_std_m": std, "transition_margin_m": 300.0 - station, "phase": "in",
         "target_station_m": 300.0, "margin_m": 300.0 - station, "margin_s": 0.0,
-        "verdict": verdict, "target_source": "transition", "detection_delay_s": 0.3, **more,
+        "verdict": verdict, "target_source": "transition", "context": "free",
+        "detection_delay_s": 0.3, **more,
     })  # fmt: skip
 
 

@@ -64,7 +64,9 @@ class Coach:
     def _moment(self, turn_in: TurnIn) -> Iterable[Cue]:
         if turn_in.verdict != "late":
             return
-        withheld = self._doubt(turn_in.corner, turn_in.turn_in_station_m, turn_in.turn_in_std_m)
+        station, std = turn_in.turn_in_station_m, turn_in.turn_in_std_m
+        free = turn_in.context == "free"
+        withheld = self._doubt(turn_in.corner, station, std) if free else "context"
         if withheld is None and self.settings.speak != "all":
             withheld = f"speak = {self.settings.speak}"
         yield self._cue(turn_in, "late", "late", withheld)

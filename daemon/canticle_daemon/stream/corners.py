@@ -21,7 +21,7 @@ from itertools import pairwise
 
 import numpy as np
 
-from canticle_daemon.frame import FloatArray, FrameBlock, IntArray, Wheels
+from canticle_daemon.frame import FloatArray, Frame, FrameBlock, IntArray, Wheels
 from canticle_daemon.messages import Context, Corner, Entry, Event, Phase, TurnIn, Verdict
 from canticle_daemon.physics.car import CarFile
 from canticle_daemon.stream.bank import GRAVITY_MPS2, Bank
@@ -46,6 +46,10 @@ from canticle_daemon.stream.turn_in import (
 from canticle_daemon.track.profile import CornerPlan, Track
 
 MEMORY_S = 2.0
+STRAIGHT_S = 1.0
+"""So much must be seen before a turn-in counts (public contract)."""
+LONGEST_PASS_S = 120.0
+"""A car that stays in one corner for longer is parked."""
 SETTLE_S = 1.0
 """After a corner's exit the steering still unwinds for about so long."""
 SLOPE_SHARE = 0.85
@@ -110,11 +114,11 @@ class Pass:
     """One pass through a corner: from the zone's start to the exit."""
 
     corner: int
+    since_s: float
     entry: Snapshot | None = None
     alarm: TurnIn | None = None
     alarm_score: float = math.nan
     joined: bool = False
-    first_row: int = 0
 
 
 # Rows of the trace that is kept of a pass; the way is from the transition's start.
@@ -179,6 +183,7 @@ class CornerStage:
         self._chunks: list[FloatArray] = []
         self._last: tuple[float, float, FloatArray, float, float] | None = None
         self._exit_s = -math.inf
+        self._seen_since = math.nan
         self._windows: list[tuple[float, float, float, int]] = []
         self._window = (-1, -math.inf)
 
@@ -193,6 +198,8 @@ class CornerStage:
     ) -> list[Event]:
         """Take in a block and return the events it completes, in order."""  # fmt: skip
         station = located.station_m
+        if math.isnan(self._seen_since):
+            self._seen_since = float(block.time_s[0])
         relative = (station - self._origin_m) % self._track.length_m
         part = np.searchsorted(self._gates, relative, side="right") - 1
         ahead = np.where(part % 4 == Part.STRAIGHT, part // 4 + 1, part // 4) % len(self._corners)
@@ -237,6 +244,7 @@ class CornerStage:
             if found is not None:
                 events.append(found)
         self._calibrate(view, ramps, span, part)
+        self._steering.learn(frames.steer_rad[span])
         last = span.stop - 1
         self._last = (
             float(view.relative[last]), float(frames.time_s[last]),
@@ -254,6 +262,11 @@ class CornerStage:
                 bank.roll_rad[span], block.throttle[span], block.brake[span],
             ])
         )  # fmt: skip
+        if (
+            self._pass is not None
+            and block.time_s[span.start] > self._pass.since_s + LONGEST_PASS_S
+        ):
+            self._pass = None
         if self._pass is None:
             self._forget_old()
 
@@ -271,16 +284,23 @@ class CornerStage:
         signal = side * view.steering.beyond_rad[span]
         base = rest if math.isfinite(rest) else 0.0
         above = signal + side * view.steering.offset_rad[span] - base
-        clear = above > np.maximum(view.steering.dogleg_rad[span], 0.08 * self._height(here.corner))
+        clear = above > np.maximum(view.steering.dogleg_rad[span], 0.02 * self._height(here.corner))
         clear &= view.block.speed_mps[span] > SLOW_SHARE * self._usual_mps(here.corner)
         risen = ramps.now_rad - ramps.level_rad > RAMP_HEIGHT_SHARE * self._height(here.corner)
-        alarms = np.flatnonzero(((ramps.score > self._threshold) | risen) & clear)
+        # A rise that began before the zone is the driver's way out of the last corner.
+        ramped = (ramps.score > self._threshold) & (ramps.onset_s >= self._watched_since(here))
+        risen &= view.block.time_s[span] >= self._seen_since + 2.0 * STRAIGHT_S
+        alarms = np.flatnonzero((ramped | risen) & clear)
         if alarms.size == 0:
             return None
         index = int(alarms[0])
         here.alarm_score = float(ramps.score[index])
         here.alarm = self._turn_in(view, span.start + index, len(signal) - 1 - index)
         return here.alarm
+
+    def _watched_since(self, here: Pass) -> float:
+        """Return from when an onset counts: in the zone, after a second of straight."""
+        return max(here.since_s, self._seen_since + STRAIGHT_S)
 
     def _turn_in(self, view: _View, frame: int, unseen: int) -> TurnIn:
         here = self._pass
@@ -312,6 +332,7 @@ class CornerStage:
             margin_s=margin / max(speed, 1.0),
             verdict=self._marks.verdict(margin, station, corner, self._track),
             target_source=corner.target_source,
+            context=_flagged(view.block.frames[frame]) or "free",
             detection_delay_s=now - knot.x,
         )
 
@@ -409,7 +430,7 @@ class CornerStage:
 
     def _open(self, corner: int, start: Snapshot, *, joined: bool) -> None:
         self._aim()
-        self._pass = Pass(corner, joined=joined)
+        self._pass = Pass(corner, start.time_s, joined=joined)
         self._keep_since(start.time_s - MEMORY_S)
 
     def _enter(self, snapshot: Snapshot) -> None:
@@ -462,7 +483,15 @@ class CornerStage:
         if not math.isfinite(rest):
             start = trace[_TIME] <= trace[_TIME, 0] + LEVEL_S
             rest = float(np.median(signal[start]))
-        return refined_knot(trace[_TIME], trace[_WAY], signal, rest, self._height(here.corner))
+        alarm = here.alarm
+        live_s = None if alarm is None else alarm.time_s - alarm.detection_delay_s
+        found = refined_knot(
+            trace[_TIME], trace[_WAY], signal, rest, self._height(here.corner), live_s
+        )
+        if found is None:
+            return None
+        onset_s = float(np.interp(found[0].x, trace[_WAY], trace[_TIME]))
+        return found if onset_s >= self._seen_since + STRAIGHT_S else None
 
     def _where(self, corner: CornerPlan, knot: Knot | None, trace: FloatArray) -> _Onset:
         """Return the fields of an entry that hang on its turn-in."""
@@ -527,7 +556,11 @@ class CornerStage:
         guesses = [guess / RAMP_TIME_S for guess in self._guess]
         slopes = [k if math.isfinite(k) else g for k, g in zip(known, guesses, strict=True)]
         self._slope = SLOPE_SHARE * min(slopes)
-        self._threshold = self._calibration.threshold(self._slope)
+        self._threshold = self._calibration.threshold(self._slope, self._quantum())
+
+    def _quantum(self) -> float:
+        step = self._steering.quantum_rad
+        return step if math.isfinite(step) else 0.0
 
     def _height(self, corner: int) -> float:
         return _median(self._habits[corner].heights, self._guess[corner])
@@ -561,14 +594,10 @@ class CornerStage:
         self._settle(onset_s - 0.1)
 
     def _context(self, view: _View, frame: int, here: Pass, inside: FloatArray) -> Context:
-        newest = view.block.frames[frame]
-        if newest.on_pit_road:
-            return "pit"
-        if newest.caution:
-            return "caution"
         usual = self._usual_mps(here.corner)
-        slow = inside.size == 0 or float(np.median(inside[_SPEED])) < SLOW_SHARE * usual
-        return "slow" if slow else "free"
+        if inside.size == 0 or float(np.median(inside[_SPEED])) < SLOW_SHARE * usual:
+            return "slow"
+        return _flagged(view.block.frames[frame]) or "free"
 
     def _usual_mps(self, corner: int) -> float:
         return _median(self._habits[corner].speeds, self._neutral_mps[corner])
@@ -605,6 +634,13 @@ class _View:
     ahead: IntArray
     side: FloatArray
     relative: FloatArray
+
+
+def _flagged(frame: Frame) -> Context | None:
+    """Return the context that the stream itself tells of."""
+    if frame.on_pit_road:
+        return "pit"
+    return "caution" if frame.caution else None
 
 
 def _changes(part: IntArray, before: int) -> list[int]:

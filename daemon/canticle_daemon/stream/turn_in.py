@@ -33,8 +33,10 @@ from canticle_daemon.stream.filters import Hold, RunningSum
 from canticle_daemon.stream.onset import Hinge, hinge_fit
 from canticle_daemon.track.profile import CornerPlan, Track
 
-LAGS_S = tuple(np.geomspace(0.06, 0.8, 12).tolist())
+LAGS_S = tuple(np.geomspace(0.03, 0.8, 15).tolist())
 LEVEL_S = 0.8
+LONG_LEVEL_S = 1.6
+"""The level is taken over this long once so much has been seen: corrections then weigh less."""
 SHORT_S = 0.15
 CLOCK_FRAMES = 9
 """So many time steps tell the sampling interval; their median survives a lost packet."""
@@ -46,10 +48,18 @@ LEVEL_SHARE = 0.06
 DOGLEG_REACH_M = 60.0
 """A driver rounds a dogleg off by about this much on either side."""
 DOGLEG_FACTOR = 1.6
-FLOOR_RAMP_S = 0.08
-PRIOR_RAMP_S = 0.35
-FALSE_ALARM_PER_WINDOW = 5e-5
+RAMP_FADES = 0.35
+"""The first ramp ends where its slope has fallen to this share of its steepest."""
+LASTING_S = 0.2
+RAMP_SHARE = 0.7
+"""The knot is fitted up to this share of the ramp's height, short of its rounded top."""
+LEAST_FRAMES = 10
+FLOOR_RAMP_S = 0.04
+PRIOR_EXCURSION_RAD = math.radians(3.3)
+"""Corrections at the wheel are smaller than this (common practice, no source)."""
+FALSE_ALARM_PER_WINDOW = 3e-4
 WINDOW_S = 0.5
+ENOUGH_WINDOWS = 60
 
 
 @dataclass(frozen=True, slots=True)
@@ -148,10 +158,14 @@ class SteeringStage:
         self._track = track
         self._gain = car.steering_ratio * car.wheelbase_m
         self._hold = Hold(0.0)
+        self._last_rad = math.nan
+        self.quantum_rad = math.inf
+        """Smallest step of the steering seen: its resolution, where it is coarse."""
 
     def reset(self) -> None:
-        """Forget the past."""
+        """Forget the past; the resolution stays."""
         self._hold.reset()
+        self._last_rad = math.nan
 
     def process(self, block: FrameBlock, station_m: FloatArray) -> Steering:
         """Return the signal of a block."""
@@ -170,16 +184,24 @@ class SteeringStage:
         beyond = self._hold.process(wheel - gain * held)
         return Steering(beyond, gain * (held - level), DOGLEG_FACTOR * gain * dogleg)
 
+    def learn(self, wheel_rad: FloatArray) -> None:
+        """Look for the steering's resolution in frames that have been judged."""
+        steps = np.abs(np.diff(wheel_rad, prepend=self._last_rad))
+        steps = np.where(steps > 1e-9, steps, np.inf)
+        self.quantum_rad = float(np.minimum.reduce(steps, initial=self.quantum_rad))
+        self._last_rad = float(wheel_rad[-1])
+
 
 @dataclass(frozen=True, slots=True)
 class Ramps:
     """The detector's output per frame, in the corner's own sense (positive into the corner).
 
-    `score` is S; `level_rad` the level held before the longest lag; `now_rad` the mean of the
+    `score` is S and `onset_s` the time of the onset it was reached for; `level_rad` the level held before the longest lag; `now_rad` the mean of the
     last moments. NaN until a second of straight has been seen.
     """
 
     score: FloatArray
+    onset_s: FloatArray
     level_rad: FloatArray
     now_rad: FloatArray
 
@@ -224,13 +246,13 @@ class RampStage:
         waiting = self._learn_clock(dt_s)
         silent = np.full(waiting, np.nan)
         if waiting == time_s.size:
-            return Ramps(silent, silent.copy(), silent.copy())
+            return Ramps(silent, silent, silent, silent)
         rows = self._accumulate(time_s[waiting:], beyond_rad[waiting:])
-        score, level, now = self._score(rows, side[waiting:], rest_rad[waiting:], slope_radps)
+        parts = self._score(rows, side[waiting:], rest_rad[waiting:], slope_radps)
         self._past = rows[:, -self._past.shape[1] :].copy()
         if not waiting:
-            return Ramps(score, level, now)
-        return Ramps(*(np.concatenate([silent, part]) for part in (score, level, now)))
+            return Ramps(*parts)
+        return Ramps(*(np.concatenate([silent, part]) for part in parts))
 
     def _learn_clock(self, dt_s: FloatArray) -> int:
         """Return how many frames pass before the sampling interval is known."""
@@ -242,10 +264,11 @@ class RampStage:
             if len(self._steps) == CLOCK_FRAMES:
                 self.dt_s = float(np.median(self._steps))
                 lags = np.rint(np.array(LAGS_S) / self.dt_s).astype(np.int64)
-                self._lags = np.unique(np.maximum(lags, 2))
+                self._lags = np.unique(np.maximum(lags, 1))
                 self._level = max(round(LEVEL_S / self.dt_s), 4)
+                self._long = max(round(LONG_LEVEL_S / self.dt_s), 8)
                 self._short = max(round(SHORT_S / self.dt_s), 2)
-                self._past = np.full((4, int(self._lags[-1]) + self._level + 1), np.nan)
+                self._past = np.full((4, int(self._lags[-1]) + self._long + 1), np.nan)
                 return index + 1
         return int(dt_s.size)
 
@@ -257,52 +280,65 @@ class RampStage:
 
     def _score(
         self, rows: FloatArray, side: FloatArray, rest: FloatArray, slope: float
-    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+    ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
         time, count, total, moment = rows
         lags = self._lags[:, None]
         here = np.arange(self._past.shape[1], rows.shape[1])
         onset = here - lags
         total_j = total[onset]
-        long = side * (total_j - total[onset - self._level]) / self._level
+        mean = side * (total_j - total[onset - self._level]) / self._level
+        long = side * (total_j - total[onset - self._long]) / self._long
         short = side * (total_j - total[onset - self._short]) / self._short
+        long = np.where(np.isfinite(rest), np.where(long == long, long, mean), np.fmin(long, mean))
+        # While the last corner's steering unwinds the level is not yet what it will be.
         level = np.where(short < long, np.fmin(long, np.maximum(short, rest)), long)
         rise = total[here] - total_j
         first = side * (moment[here] - moment[onset] - count[onset] * rise)
         first -= level * (lags * (lags + 1) / 2)
-        step = (time[here] - time[onset]) / lags
+        began = time[onset]
+        step = (time[here] - began) / lags
         squares = lags * (lags + 1) * (2 * lags + 1) / 6
         score = step * (slope * step * first - 0.5 * slope**2 * step**2 * squares)
-        best = np.fmax.reduce(score, axis=0)
+        best = np.argmax(np.where(score == score, score, -np.inf), axis=0)
+        column = np.arange(best.size)
         now = side * (total[here] - total[here - self._short]) / self._short
-        return best, long[-1], now
+        return score[best, column], began[best, column], long[-1], now
 
 
 class Calibration:
     """The threshold on S from this driver's own calm stretches.
 
-    Maxima of S over windows of half a second are collected where no corner was taken. The
-    upper tenth is taken for an exponential tail (peaks over a threshold), extrapolated to
+    Maxima of S over windows of half a second are collected where no corner was taken. S grows
+    with the third power of an excursion, so its cube root is what has a plain tail: the upper
+    tenth is taken for exponential (peaks over a threshold) and extrapolated to
     `FALSE_ALARM_PER_WINDOW`. Before enough is known, a cautious default holds.
     """
 
     def __init__(self) -> None:
-        self._maxima: deque[float] = deque(maxlen=600)
+        self._maxima: deque[float] = deque(maxlen=3000)
 
     def add(self, maximum: float) -> None:
         """Take in the largest S of one calm window."""
         if math.isfinite(maximum):
-            self._maxima.append(max(maximum, 0.0))
+            self._maxima.append(math.cbrt(max(maximum, 0.0)))
 
-    def threshold(self, slope_radps: float) -> float:
-        """Return the threshold for a ramp slope."""
-        floor = _ramp_score(slope_radps, FLOOR_RAMP_S)
-        if len(self._maxima) < 30:
-            return _ramp_score(slope_radps, PRIOR_RAMP_S)
+    def threshold(self, slope_radps: float, quantum_rad: float) -> float:
+        """Return the threshold for a ramp slope and a step of the steering's resolution."""
+        floor = max(_ramp_score(slope_radps, FLOOR_RAMP_S), _step_score(slope_radps, quantum_rad))
+        if len(self._maxima) < ENOUGH_WINDOWS:
+            return max(floor, _ramp_score(slope_radps, PRIOR_EXCURSION_RAD / slope_radps))
         values = np.sort(np.array(self._maxima))
-        cut = float(values[int(0.9 * values.size)])
-        excess = float(np.mean(values[values >= cut] - cut))
-        tail = cut + excess * math.log(0.1 / FALSE_ALARM_PER_WINDOW)
-        return max(floor, tail, 1.05 * float(values[-1]))
+        upper = values[int(0.9 * values.size) :]
+        excess = float(np.mean(upper - upper[0]))
+        # The mean excess of k maxima is known to about 1/√k of itself.
+        excess *= 1.0 + 1.5 / math.sqrt(upper.size)
+        tail = float(upper[0]) + excess * math.log(0.1 / FALSE_ALARM_PER_WINDOW)
+        return max(floor, tail**3)
+
+
+def _step_score(slope: float, step: float) -> float:
+    """Return the most a lasting step scores, max over T of g·q·T²/2 − g²·T³/6, and a fifth."""
+    return 0.8 * step**3 / slope
 
 
 def _ramp_score(slope: float, duration_s: float) -> float:
@@ -365,9 +401,18 @@ def live_knot(time_s: FloatArray, signal: FloatArray, slope: float, slope_std: f
 
 
 def refined_knot(
-    time_s: FloatArray, way_m: FloatArray, signal: FloatArray, rest: float, amplitude: float
+    time_s: FloatArray,
+    way_m: FloatArray,
+    signal: FloatArray,
+    rest: float,
+    height: float,
+    live_s: float | None,
 ) -> tuple[Knot, float] | None:
     """Estimate the onset from the whole entry.
+
+    The ramp that begins the corner is often only the first of several: the banking turns the
+    car too, and the wheel may ease back while it rises. So the fit ends where the first ramp
+    does, and it stays with the onset that was seen live.
 
     Parameters
     ----------
@@ -375,8 +420,10 @@ def refined_knot(
         From before the zone to the apex, in the corner's sense; `way_m` rises.
     rest
         The level held before, as well as it is known.
-    amplitude
-        The usual height of the ramp; less than a third of it is no turn-in.
+    height
+        The usual height of the first ramp; less than a third of it is no turn-in.
+    live_s
+        The time of the onset seen live, None where there was no alarm.
 
     Returns
     -------
@@ -384,27 +431,61 @@ def refined_knot(
         The knot along the way (slope per meter), and the height of the ramp; None where
         nothing like a turn-in is found.
     """
-    dt = (float(time_s[-1]) - float(time_s[0])) / max(time_s.size - 1, 1)
-    smooth = _centered_mean(signal, max(round(0.05 / dt), 1)) - rest
-    height = float(smooth.max())
-    if height < amplitude / 3.0:
+    if time_s.size < LEAST_FRAMES:
         return None
-    hold = max(round(0.4 / dt), 2)
-    ahead = _mean_ahead(smooth, hold)
-    risen = np.flatnonzero((smooth > 0.5 * height) & (ahead > 0.5 * height))
+    dt = (float(time_s[-1]) - float(time_s[0])) / (time_s.size - 1)
+    half = max(round(0.05 / dt), 1)
+    smooth = _centered_mean(signal, half)
+    begin = _first_rise(smooth - rest, height, dt) if live_s is None else _at(time_s, live_s)
+    if begin is None:
+        return None
+    span = max(round(LEVEL_S / dt), 4)
+    before = smooth[max(begin - span, 0) : begin + 1]
+    level = float(np.median(before))
+    end = _ramp_end(smooth, begin, dt)
+    risen = float(smooth[end]) - level
+    if risen < height / 3.0:
+        return None
+    climb = smooth[begin : end + 1] - level
+    top = begin + int(np.argmax(climb >= RAMP_SHARE * risen))
+    low = np.flatnonzero(smooth[:top] - level < 0.1 * risen)
+    foot = int(low[-1]) if low.size else begin
+    first, last = max(foot - span, 0), max(top, foot + 3) + 1
+    hinge: Hinge = hinge_fit(way_m[first:last], signal[first:last], sign=1)
+    if not math.isfinite(hinge.knot):
+        return None
+    return Knot(hinge.knot, hinge.std_knot, hinge.level, hinge.slope), risen
+
+
+def _at(time_s: FloatArray, moment: float) -> int:
+    return min(max(int(np.searchsorted(time_s, moment)), 1), time_s.size - 2)
+
+
+def _first_rise(above: FloatArray, height: float, dt: float) -> int | None:
+    """Return where the signal last was low before it first rose by half the usual and stayed."""
+    ahead = _mean_ahead(above, max(round(0.2 / dt), 2))
+    risen = np.flatnonzero((above > 0.5 * height) & (ahead > 0.35 * height))
     if risen.size == 0:
         return None
-    half = int(risen[0])
-    low = np.flatnonzero(smooth[:half] < 0.08 * height)
-    foot = int(low[-1]) if low.size else 0
-    first = max(foot - max(round(LEVEL_S / dt), 4), 0)
-    last = half + 1
-    if last - first < 8:
-        return None
-    hinge: Hinge = hinge_fit(way_m[first:last], signal[first:last], sign=1)
-    if not math.isfinite(hinge.knot) or hinge.slope <= 0.0:
-        return None
-    return Knot(hinge.knot, hinge.std_knot, hinge.level, hinge.slope), height
+    low = np.flatnonzero(above[: int(risen[0])] < 0.05 * height)
+    return int(low[-1]) if low.size else 0
+
+
+def _ramp_end(smooth: FloatArray, begin: int, dt: float) -> int:
+    """Return the sample at which the ramp from `begin` has lost most of its slope."""
+    reach = max(round(0.1 / dt), 1)
+    rate = (smooth[2 * reach :] - smooth[: -2 * reach]) / (2 * reach * dt)
+    rate = np.concatenate([np.repeat(rate[:1], reach), rate, np.repeat(rate[-1:], reach)])
+    ahead = rate[begin:]
+    highest = np.maximum.accumulate(np.maximum(ahead, 0.0))
+    # A correction against the ramp slows it for a moment; an end lasts.
+    lasting = max(round(LASTING_S / dt), 1)
+    padded = np.concatenate([ahead, np.repeat(ahead[-1:], lasting)])
+    strongest = np.lib.stride_tricks.sliding_window_view(padded, lasting + 1).max(axis=1)
+    spent = strongest < RAMP_FADES * highest
+    spent[: max(round(0.12 / dt), 2)] = False
+    found = np.flatnonzero(spent)
+    return begin + (int(found[0]) if found.size else ahead.size - 1)
 
 
 def _centered_mean(values: FloatArray, half: int) -> FloatArray:
