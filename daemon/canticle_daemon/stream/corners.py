@@ -204,7 +204,6 @@ class CornerStage:
         part = np.searchsorted(self._gates, relative, side="right") - 1
         ahead = np.where(part % 4 == Part.STRAIGHT, part // 4 + 1, part // 4) % len(self._corners)
         steering = self._steering.process(block, station)
-        rest = np.array([self._rest(corner) for corner in range(len(self._corners))])
         side = self._sides[ahead]
         view = _View(block, located, demand, spend, steering, part, ahead, side, relative)
         events: list[Event] = []
@@ -212,11 +211,10 @@ class CornerStage:
         # The detector's settings change only where a gate is passed, so cut there.
         for stop in [*_changes(part, self._part), len(block)]:
             if stop > begin:
-                self._stretch(view, bank, dt_s, rest, slice(begin, stop), events)
+                self._stretch(view, bank, dt_s, self._rests, slice(begin, stop), events)
                 begin = stop
             if stop < len(block):
                 events.extend(self._pass_gates(view, stop))
-                rest = np.array([self._rest(corner) for corner in range(len(self._corners))])
         return events
 
     # --- between gates -------------------------------------------------------------------
@@ -556,6 +554,7 @@ class CornerStage:
         guesses = [guess / RAMP_TIME_S for guess in self._guess]
         slopes = [k if math.isfinite(k) else g for k, g in zip(known, guesses, strict=True)]
         self._slope = SLOPE_SHARE * min(slopes)
+        self._rests = np.array([self._rest(corner) for corner in range(len(self._corners))])
         self._threshold = self._calibration.threshold(self._slope, self._quantum())
 
     def _quantum(self) -> float:

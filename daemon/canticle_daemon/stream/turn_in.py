@@ -60,6 +60,7 @@ PRIOR_EXCURSION_RAD = math.radians(3.3)
 FALSE_ALARM_PER_WINDOW = 3e-4
 WINDOW_S = 0.5
 ENOUGH_WINDOWS = 60
+EARLY_SPARE = 1.2
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,7 +70,7 @@ class Guide:
     Parameters
     ----------
     station_m
-        The grid, shape (n,).
+        The grid from 0 to the lap's length, both included, shape (n,).
     held_1pm
         Curvature of the straight, held on where a corner takes over; doglegs are in it.
     dogleg_1pm
@@ -95,7 +96,9 @@ class Guide:
             track.corners, (track.corners[-1:] + track.corners[:-1]), strict=True
         ):
             _guide_corner(track, corner, previous, (station, curvature, held, dogleg, level))
-        return cls(station, held, dogleg, level)
+        columns = (held, dogleg, level)
+        held, dogleg, level = (np.append(column, column[0]) for column in columns)
+        return cls(np.append(station, track.length_m), held, dogleg, level)
 
 
 def corner_curvature(track: Track, corner: CornerPlan) -> float:
@@ -170,10 +173,9 @@ class SteeringStage:
     def process(self, block: FrameBlock, station_m: FloatArray) -> Steering:
         """Return the signal of a block."""
         guide, gain = self._guide, self._gain
-        length = self._track.length_m
-        held = np.interp(station_m, guide.station_m, guide.held_1pm, period=length)
-        level = np.interp(station_m, guide.station_m, guide.level_1pm, period=length)
-        dogleg = np.interp(station_m, guide.station_m, guide.dogleg_1pm, period=length)
+        held = np.interp(station_m, guide.station_m, guide.held_1pm)
+        level = np.interp(station_m, guide.station_m, guide.level_1pm)
+        dogleg = np.interp(station_m, guide.station_m, guide.dogleg_1pm)
         wheel = block.steer_rad
         if not np.isfinite(wheel).all():
             moving = np.where(block.speed_mps > 5.0, block.speed_mps, np.nan)
@@ -186,7 +188,8 @@ class SteeringStage:
 
     def learn(self, wheel_rad: FloatArray) -> None:
         """Look for the steering's resolution in frames that have been judged."""
-        steps = np.abs(np.diff(wheel_rad, prepend=self._last_rad))
+        before = np.concatenate([[self._last_rad], wheel_rad[:-1]])
+        steps = np.abs(wheel_rad - before)
         steps = np.where(steps > 1e-9, steps, np.inf)
         self.quantum_rad = float(np.minimum.reduce(steps, initial=self.quantum_rad))
         self._last_rad = float(wheel_rad[-1])
@@ -196,8 +199,9 @@ class SteeringStage:
 class Ramps:
     """The detector's output per frame, in the corner's own sense (positive into the corner).
 
-    `score` is S and `onset_s` the time of the onset it was reached for; `level_rad` the level held before the longest lag; `now_rad` the mean of the
-    last moments. NaN until a second of straight has been seen.
+    `score` is S and `onset_s` the time of the onset it was reached for; `level_rad` is the level
+    held before the longest lag, `now_rad` the mean of the last moments. NaN until a second of
+    straight has been seen.
     """
 
     score: FloatArray
@@ -268,6 +272,9 @@ class RampStage:
                 self._level = max(round(LEVEL_S / self.dt_s), 4)
                 self._long = max(round(LONG_LEVEL_S / self.dt_s), 8)
                 self._short = max(round(SHORT_S / self.dt_s), 2)
+                column = self._lags[:, None]
+                self._ones = column * (column + 1) / 2
+                self._squares = column * (column + 1) * (2 * column + 1) / 6
                 self._past = np.full((4, int(self._lags[-1]) + self._long + 1), np.nan)
                 return index + 1
         return int(dt_s.size)
@@ -294,11 +301,10 @@ class RampStage:
         level = np.where(short < long, np.fmin(long, np.maximum(short, rest)), long)
         rise = total[here] - total_j
         first = side * (moment[here] - moment[onset] - count[onset] * rise)
-        first -= level * (lags * (lags + 1) / 2)
+        first -= level * self._ones
         began = time[onset]
         step = (time[here] - began) / lags
-        squares = lags * (lags + 1) * (2 * lags + 1) / 6
-        score = step * (slope * step * first - 0.5 * slope**2 * step**2 * squares)
+        score = step * (slope * step * first - 0.5 * slope**2 * step**2 * self._squares)
         best = np.argmax(np.where(score == score, score, -np.inf), axis=0)
         column = np.arange(best.size)
         now = side * (total[here] - total[here - self._short]) / self._short
@@ -326,7 +332,9 @@ class Calibration:
         """Return the threshold for a ramp slope and a step of the steering's resolution."""
         floor = max(_ramp_score(slope_radps, FLOOR_RAMP_S), _step_score(slope_radps, quantum_rad))
         if len(self._maxima) < ENOUGH_WINDOWS:
-            return max(floor, _ramp_score(slope_radps, PRIOR_EXCURSION_RAD / slope_radps))
+            seen = EARLY_SPARE * max(self._maxima, default=0.0)
+            prior = _ramp_score(slope_radps, PRIOR_EXCURSION_RAD / slope_radps)
+            return max(floor, prior, seen**3)
         values = np.sort(np.array(self._maxima))
         upper = values[int(0.9 * values.size) :]
         excess = float(np.mean(upper - upper[0]))
