@@ -80,9 +80,7 @@ def drive(seed: int, laps: int, correction_deg: float | None, noise: bool) -> Ta
     return tally
 
 
-def judge(
-    tally: Tally, track: Track, rehearsal: Rehearsal, events: list, frames: list
-) -> None:
+def judge(tally: Tally, track: Track, rehearsal: Rehearsal, events: list, frames: list) -> None:
     live = {(e.lap, e.corner): e for e in events if isinstance(e, TurnIn)}
     entries = {(e.lap, e.corner): e for e in events if isinstance(e, Entry)}
     corners = {corner.name: corner for corner in track.corners}
