@@ -1,3 +1,4 @@
+import io
 import sys
 from collections.abc import Iterator
 from importlib import import_module
@@ -15,8 +16,11 @@ from canticle_daemon.adapter_api import (
     find_adapter,
     load_adapters,
 )
+from canticle_daemon.config import Config
 from canticle_daemon.errors import AdapterLoadError
 from canticle_daemon.frame import Frame
+from canticle_daemon.runtime.console import Console
+from canticle_daemon.runtime.setup import gather
 
 
 class Plain(Adapter):
@@ -137,3 +141,11 @@ def test_an_installed_plug_in_is_found_beside_the_built_in_ones(installed: Path)
     assert "RuntimeError: needs a license" in records["kestrel-pro"].reason
     assert records["json"].status == "ready"
     assert find_adapter("kestrel") is import_module("kestrel_telemetry").KestrelAdapter
+
+
+def test_a_broken_plug_in_is_told_and_stops_nothing(installed: Path):
+    told = io.StringIO()
+    parts = gather(Config(), Console(told))
+    assert parts.adapter.name == "json"
+    assert "adapter kestrel-pro" in told.getvalue()
+    assert "needs a license" in told.getvalue()

@@ -12,7 +12,7 @@ from typing import Any
 import platformdirs
 from pydantic import Field
 
-from canticle_daemon.adapter_api import Adapter, find_adapter
+from canticle_daemon.adapter_api import Adapter, AdapterRecord, find_adapter, load_adapters
 from canticle_daemon.coach.judge import Coach
 from canticle_daemon.config import Config, Section, load_toml, validate
 from canticle_daemon.errors import ConfigError
@@ -119,12 +119,18 @@ def gather(config: Config, console: Console) -> Parts:
             load_toml(config.coach.targets, TargetsFile).targets, str(config.coach.targets)
         )
     car = CarFile.load(config.car.file)
-    return Parts(config, track, car, _adapter(config), console)
+    records = load_adapters()
+    for record in records:
+        if record.status != "ready":
+            console.line(
+                f"adapter {record.name} ({record.origin}) is {record.status}: {record.reason}"
+            )
+    return Parts(config, track, car, _adapter(config, records), console)
 
 
-def _adapter(config: Config) -> Adapter:
+def _adapter(config: Config, records: list[AdapterRecord]) -> Adapter:
     name = config.input.adapter
-    kind = find_adapter(name)
+    kind = find_adapter(name, records)
     given = dict(config.adapter.get(name, {}))
     if config.input.layout is not None and "layout" in kind.Options.model_fields:
         given["layout"] = config.input.layout
