@@ -34,6 +34,7 @@ def main(argv: Sequence[str] | None = None) -> int:
         noise=wanted.noise,
         mirror=wanted.mirror,
         keys=wanted.keys,
+        evening=wanted.evening,
     )
     return rehearse(Rehearsal(options), wanted.to, wanted.pace, wanted.bus, stop, wanted.truth)
 
@@ -63,6 +64,7 @@ def _parser() -> argparse.ArgumentParser:
     add("--noise", action=argparse.BooleanOptionalAction, default=True, help="sensor noise")
     add("--mirror", action="store_true", help="the mirror image: a right-turning oval")
     add("--keys", choices=("full", "basic"), default="full", help="how much the stream tells")
+    add("--evening", action="store_true", help="a practice evening: stops, cautions, traffic")
     add("--write-track", type=Path, metavar="FILE", help="only write the oval's track file")
     add("--with-parent", action="store_true", help="end when standard input ends")
     return parser

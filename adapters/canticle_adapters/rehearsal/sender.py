@@ -193,7 +193,7 @@ class Truth:
 
     def __init__(self, path: Path) -> None:
         self._file = path.open("wb")
-        self._written = 0
+        self._written = self._happened = 0
         self._encoder = msgspec.json.Encoder()
 
     def close(self) -> None:
@@ -201,12 +201,20 @@ class Truth:
         self._file.close()
 
     def write(self, drive: Rehearsal, record: Values) -> None:
-        """Write the turn-ins that are new, then the frame's record."""
+        """Write the turn-ins and happenings that are new, then the frame's record."""
         for turn_in in drive.turn_ins[self._written :]:
             self._line(drive.turn_in_record(turn_in))
         self._written = len(drive.turn_ins)
+        self.write_happenings(drive)
         self._line(record)
         self._file.flush()
+
+    def write_happenings(self, drive: Rehearsal) -> None:
+        """Write what happened since; once more after the last frame."""
+        happenings = drive.happenings
+        for happening in happenings[self._happened :]:
+            self._line(drive.happening_record(happening))
+        self._happened = len(happenings)
 
     def _line(self, record: Values) -> None:
         self._file.write(self._encoder.encode(record) + b"\n")
@@ -236,6 +244,8 @@ def send(
             count += 1
             if truth is not None:
                 truth.write(drive, record)
+    if truth is not None:
+        truth.write_happenings(drive)
     return count
 
 

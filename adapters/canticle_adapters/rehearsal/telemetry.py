@@ -15,8 +15,10 @@ from typing import Any, Literal
 
 import msgspec
 
-from canticle_adapters.rehearsal.car import STEP_S, Car, CarData
+from canticle_adapters.rehearsal.car import GRAVITY_MPS2, STEP_S, Car, CarData
 from canticle_adapters.rehearsal.driver import Driver, Style, TurnIn
+from canticle_adapters.rehearsal.evening import Evening, Script
+from canticle_adapters.rehearsal.evening_driver import EveningCar, EveningDriver
 from canticle_adapters.rehearsal.oval import greenwold, track_name
 
 Keys = Literal["full", "basic"]
@@ -29,6 +31,7 @@ YAW_RATE_NOISE_RADPS = 0.002
 ATTITUDE_NOISE_RAD = 0.0005
 STEER_STEP_RAD = math.radians(0.05)
 DRIVER_NAME = "Rehearsal"
+GHOST_MPS = 57.0
 
 _ACCELERATIONS = ("accel_x_mps2", "accel_y_mps2", "accel_z_mps2")
 _ATTITUDE = ("roll_rad", "pitch_rad", "yaw_rad")
@@ -59,6 +62,8 @@ class Options:
         The mirror image: a right-turning oval.
     keys
         `full`, or `basic` for a simulator that tells little.
+    evening
+        A whole practice evening instead of clean laps, True for the usual one.
     """
 
     laps: int | None = None
@@ -69,6 +74,7 @@ class Options:
     keys: Keys = "full"
     style: Style = field(default_factory=Style)
     car: CarData = field(default_factory=CarData)
+    evening: Evening | bool = False
 
 
 class Rehearsal:
@@ -77,12 +83,24 @@ class Rehearsal:
     def __init__(self, options: Options | None = None) -> None:
         self.options = options if options is not None else Options()
         self.oval = greenwold()
-        self.car = Car(self.oval, self.options.car)
-        self.driver = Driver(self.oval, self.car, self.options.seed, self.options.style)
+        self.laps = self.options.laps
+        self.car, self.driver, self.evening = self._car_and_driver()
         self.controls = (0.0, 0.0, 0.0)
         self.time_s = 0.0
         self._noise = random.Random(f"{self.options.seed}/noise")
         self._side = -1.0 if self.options.mirror else 1.0
+
+    def _car_and_driver(self) -> tuple[Car, Driver, EveningDriver | None]:
+        options, oval = self.options, self.oval
+        if options.evening is False:
+            car = Car(oval, options.car)
+            return car, Driver(oval, car, options.seed, options.style), None
+        evening = Evening() if options.evening is True else options.evening
+        self.laps = evening.laps if self.laps is None else self.laps
+        script = Script(oval, evening, self.laps, options.seed)
+        own = EveningCar(oval, options.car, evening.fuel_kg, evening.burn_kgps)
+        driver = EveningDriver(oval, own, options.seed, options.style, script)
+        return own, driver, driver
 
     @property
     def turn_ins(self) -> list[TurnIn]:
@@ -102,6 +120,8 @@ class Rehearsal:
             yield tick
             car.advance()
             tick += 1
+        if self.evening is not None:
+            self.evening.book.finish(self.car.laps)
 
     def frames(self) -> Iterator[tuple[Values, Values]]:
         """Yield the values of each frame and its truth record."""
@@ -129,8 +149,25 @@ class Rehearsal:
             "level_steer_rad": self._side * turn_in.level_steer_rad,
         }
 
+    @property
+    def happenings(self) -> list[Values]:
+        """The evening's records so far, as lines of the truth file; none of clean laps."""
+        return [] if self.evening is None else self.evening.book.records
+
+    def happening_record(self, happening: Values) -> Values:
+        """Return one of `happenings` with the signs and wheels of the road as it is driven."""
+        if not self.options.mirror:
+            return happening
+        record = dict(happening)
+        for name in ("lateral_m", "apex_lateral_m"):
+            if name in record:
+                record[name] = -record[name]
+        if "changed" in record:
+            record["changed"] = [record["changed"][wheel] for wheel in _SWAP]
+        return record
+
     def _over(self) -> bool:
-        laps, car = self.options.laps, self.car
+        laps, car = self.laps, self.car
         return laps is not None and car.laps >= laps and car.station_m >= RUN_OUT_M
 
     def truth(self) -> Values:
@@ -155,11 +192,20 @@ class Rehearsal:
         values = basic_values(self)
         if self.options.keys == "full":
             values |= more_values(self)
+        if self.evening is not None:
+            self._through_the_evening(values, self.evening)
         if self.options.mirror:
             _mirror(values)
         if self.options.noise:
             self._disturb(values)
         return _rounded(values)
+
+    def _through_the_evening(self, values: Values, evening: EveningDriver) -> None:
+        values["steer_rad"] += evening.now.zero_rad
+        if self.options.keys == "full":
+            values |= evening_values(evening)
+        if not evening.now.in_car:
+            values |= {k: v for k, v in ghost_values(self).items() if k in values}
 
     def _disturb(self, values: Values) -> None:
         gauss = self._noise.gauss
@@ -236,6 +282,52 @@ def more_values(drive: Rehearsal) -> Values:
     }
 
 
+def evening_values(driver: EveningDriver) -> Values:
+    """Return what a practice evening adds for a simulator of many words."""
+    now, car = driver.now, driver.evening_car
+    return {
+        "tire_set": now.tire_set,
+        "fuel_kg": car.fuel_kg,
+        "in_car": now.in_car,
+        "on_pit_road": now.on_pit_road,
+        "caution": now.caution,
+        "car_left": now.car_inside,
+        "car_right": now.car_outside,
+        "gap_ahead_s": now.gap_s,
+    }
+
+
+def ghost_values(drive: Rehearsal) -> Values:
+    """Return what a watched replay shows: another car that follows the reference line."""
+    oval = drive.oval
+    speed = GHOST_MPS + 2.0 * math.sin(drive.time_s / 5.0)
+    station = (GHOST_MPS * drive.time_s) % oval.length_m
+    curvature, (roll, _, _) = oval.curvature(station)[0], oval.roll(station)
+    x, y, z = oval.place(station, 0.0)
+    turning = speed * curvature
+    cos_roll, sin_roll = math.cos(roll), math.sin(roll)
+    return {
+        "speed_mps": speed,
+        "yaw_rate_radps": turning * cos_roll,
+        "accel_x_mps2": 0.4 * math.cos(drive.time_s / 5.0),
+        "accel_y_mps2": speed * turning * cos_roll + GRAVITY_MPS2 * sin_roll,
+        "accel_z_mps2": GRAVITY_MPS2 * cos_roll - speed * turning * sin_roll,
+        "station_m": station,
+        "steer_rad": drive.car.data.steering_ratio * drive.car.data.wheelbase_m * 1.3 * curvature,
+        "throttle": 0.6,
+        "brake": 0.0,
+        "pos_x_m": x,
+        "pos_y_m": y,
+        "pos_z_m": z,
+        "roll_rad": roll,
+        "pitch_rad": 0.0,
+        "yaw_rad": math.remainder(oval.line(station)[2], 2.0 * math.pi),
+        "vel_x_mps": speed,
+        "vel_y_mps": 0.0,
+        "lateral_m": 0.0,
+    }
+
+
 def attitude(drive: Rehearsal) -> tuple[float, float, float]:
     """Return roll, pitch (positive nose down) and yaw of the car's own axes in the world."""
     car = drive.car
@@ -262,6 +354,8 @@ def _mirror(values: Values) -> None:
         for name in ("wheel_load_n", "wheel_slip_angle_rad", "wheel_slip_ratio", "tire_tread"):
             sign = -1.0 if name == "wheel_slip_angle_rad" else 1.0
             values[name] = [sign * values[name][wheel] for wheel in _SWAP]
+    if "car_left" in values:
+        values["car_left"], values["car_right"] = values["car_right"], values["car_left"]
 
 
 _DIGITS = {
@@ -271,6 +365,7 @@ _DIGITS = {
     **dict.fromkeys(("station_m", "pos_x_m", "pos_y_m", "pos_z_m", "lateral_m"), 3),
     **dict.fromkeys(("yaw_rate_radps", "steer_rad", *_ATTITUDE), 6),
     "wheel_load_n": 1,
+    **dict.fromkeys(("fuel_kg", "gap_ahead_s"), 3),
     **dict.fromkeys(("wheel_slip_angle_rad", "wheel_slip_ratio", "tire_tread"), 6),
 }
 
