@@ -601,3 +601,14 @@ def test_demand_is_the_ratio_of_the_specific_forces(
     assert side / normal == pytest.approx(
         float(road.side_demand_steady(speed, curvature, bank)), abs=1e-9
     )
+
+
+@pytest.mark.parametrize("roll_deg", [-31.0, -20.0, 0.0, 8.0])
+@pytest.mark.parametrize("rise", [0.0, -3.0])
+def test_the_normal_force_that_goes_with_a_side_force(roll_deg: float, rise: float) -> None:
+    """Two vectors: whatever pushes the car level, its weight and its rise are carried."""
+    roll = math.radians(roll_deg)
+    force = np.array([13.0, 9.81 + rise])  # level and upward
+    left, up = (math.cos(roll), math.sin(roll)), (-math.sin(roll), math.cos(roll))
+    found = road.normal_from_side_force(force @ left, roll, rise)
+    assert float(found) == pytest.approx(float(force @ up), rel=1e-12)

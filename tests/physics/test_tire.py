@@ -179,3 +179,20 @@ def test_energy_is_convex_in_force(forces: tuple[float, float], share: float, lo
     low, high = brush.sliding_power_w(np.array(forces), load, 60.0, car_tire)
     steady = brush.sliding_power_w(mean, load, 60.0, car_tire)
     assert steady <= share * low + (1.0 - share) * high + 1e-6
+
+
+@pytest.mark.parametrize("slip", [0.005, 0.03, 0.06, 0.1, 0.2])
+def test_how_force_follows_friction_at_a_given_slip(slip: float) -> None:
+    """The exponent against a finite difference of the brush force itself."""
+    step, load, stiffness = 1e-6, 4000.0, 80_000.0
+    below, here, above = (
+        -float(brush.brush_side_force_n(slip, load, friction, stiffness))
+        for friction in (1.0 - step, 1.0, 1.0 + step)
+    )
+    slope = (above - below) / (2.0 * step) / here
+    used = here / load
+    if used < brush.MAX_UTILIZATION:
+        assert float(brush.friction_exponent(used)) == pytest.approx(slope, abs=1e-5)
+    else:  # all of it slides: the force is the friction's
+        assert slope == pytest.approx(1.0, abs=1e-5)
+        assert float(brush.friction_exponent(used)) > 0.9

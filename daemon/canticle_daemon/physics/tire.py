@@ -171,6 +171,25 @@ def sliding_power_w(
     return power
 
 
+def friction_exponent(utilization: Values) -> FloatArray:
+    """Return the local exponent with which force grows with friction at a given slip.
+
+    Parameters
+    ----------
+    utilization
+        Share of the available friction in use, 0 to below 1.
+
+    Returns
+    -------
+    array
+        d ln F/d ln μ = ψ·(1 − ⅔ψ)/(1 − ψ + ⅓ψ²) with ψ = 1 − (1 − u)^⅓: 0 where the tire
+        hardly slides and stiffness alone counts, 1 where it slides all over.
+    """
+    psi = _slip_share(np.clip(utilization, 0.0, MAX_UTILIZATION))
+    exponent: FloatArray = psi * (1.0 - psi * (2.0 / 3.0)) / (1.0 - psi + psi * psi / 3.0)
+    return exponent
+
+
 def wear_exponent(utilization: Values) -> FloatArray:
     """Return the local exponent with which sliding energy per meter grows with force.
 

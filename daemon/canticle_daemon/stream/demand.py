@@ -2,9 +2,14 @@
 
 Specific force in the road's frame times mass, with drag and downforce taken out, is what the
 tires carry; the bank angle is not needed. Where the stream has no vertical acceleration the
-map stands in for it: the normal specific force follows from the road's roll, its rates, and
-the car's motion across the road. These rates are followed only over frames that need them, so
-that a stream that has all it needs pays nothing for them.
+map and the car's place stand in for it (`stand_in.py`), and the change of speed for a missing
+longitudinal one, each only over frames that need it, so that a stream that has all it needs
+pays nothing.
+
+Among the tires of an axle the side force goes by load, as they have one slip angle and a
+stiffness in proportion to load; drive and braking go half and half, as an open differential
+and a brake line give both wheels the same torque. An axle's side force follows from the balance
+of yaw moments.
 """
 
 from __future__ import annotations
@@ -16,17 +21,20 @@ import numpy as np
 
 from canticle_daemon.frame import BoolArray, FloatArray, FrameBlock
 from canticle_daemon.physics.car import CarFile, axle_side_forces, wheel_loads
-from canticle_daemon.physics.road import normal_specific_force
-from canticle_daemon.physics.tire import MAX_UTILIZATION, peak_friction
-from canticle_daemon.stream.bank import GRAVITY_MPS2, Bank
+from canticle_daemon.physics.road import GRAVITY_MPS2
+from canticle_daemon.physics.tire import MAX_UTILIZATION, friction_exponent, peak_friction
+from canticle_daemon.stream.bank import Bank
 from canticle_daemon.stream.filters import Derivative
 from canticle_daemon.stream.locate import Located
+from canticle_daemon.stream.stand_in import StandIn
 from canticle_daemon.track.profile import Track
 
 MIN_SPEED_MPS = 5.0
 MIN_LOAD_SHARE = 0.2
 """Below this share of the weight a ratio to the normal force says nothing."""
 RATE_TAU_S = 0.08
+PEDAL_REST = 0.02
+"""A brake pedal below this is not pressed: what then slows the car is the engine."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,17 +69,17 @@ class DemandStage:
 
     def __init__(self, car: CarFile, track: Track | None) -> None:
         self._car = car
-        self._stand_in = track is not None
-        self._axis_m = 0.0 if track is None else track.file.bank_axis_offset_m
+        self._stand_in = None if track is None else StandIn(car, track)
         self._gradient = math.radians(car.roll_gradient_deg_per_g) / GRAVITY_MPS2
         self._yaw_acceleration = Derivative(RATE_TAU_S)
         self._speed_rate = Derivative(RATE_TAU_S, forgets=True)
-        self._motion = [Derivative(RATE_TAU_S, forgets=True) for _ in range(4)]
 
     def reset(self) -> None:
         """Forget the past."""
-        for rate in (self._yaw_acceleration, self._speed_rate, *self._motion):
-            rate.reset()
+        self._yaw_acceleration.reset()
+        self._speed_rate.reset()
+        if self._stand_in is not None:
+            self._stand_in.reset()
 
     def process(self, block: FrameBlock, located: Located, bank: Bank, dt_s: FloatArray) -> Demand:
         """Compute the demand for a block."""
@@ -91,56 +99,32 @@ class DemandStage:
         yaw_acceleration = self._yaw_acceleration.process(block.yaw_rate_radps, dt_s)
         modeled = wheel_loads(car, normal_n, side_n, forward_n, down_front, down_rear)
         load = self._streamed_loads(block, modeled, defined)
-        axles = self._axle_forces(side_n, forward_n, yaw_acceleration)
-        return _demand(normal_n, side_n, forward_n, load, axles, car)
+        axle_side = np.stack(axle_side_forces(car, side_n, yaw_acceleration))
+        axle_forward = self._axle_forward(forward_n, axle_side[0], block)
+        return _demand(normal_n, side_n, forward_n, load, axle_side, axle_forward, car)
 
     def _specific_force(
         self, block: FrameBlock, located: Located, bank: Bank, dt_s: FloatArray
     ) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Turn the body's specific force into the road's frame, filling what is missing."""
+        forward, upward = block.accel_x_mps2, block.accel_z_mps2
+        if self._stand_in is not None:
+            missing = np.isnan(forward)
+            if missing.any():
+                speed = np.where(missing, block.speed_mps, np.nan)
+                forward = np.where(missing, self._speed_rate.process(speed, dt_s), forward)
+            else:
+                self._speed_rate.reset()
+            missing = np.isnan(upward)
+            if missing.any():
+                mapped = self._stand_in.process(block, located, bank.map_roll_rad, dt_s, missing)
+                upward = np.where(missing, mapped, upward)
+            else:
+                self._stand_in.reset()
         body = self._gradient * block.accel_y_mps2
         cos, sin = np.cos(body), np.sin(body)
-        side = cos * block.accel_y_mps2 - sin * block.accel_z_mps2
-        normal = sin * block.accel_y_mps2 + cos * block.accel_z_mps2
-        forward = block.accel_x_mps2
-        if not self._stand_in:
-            return forward, side, normal
-        missing = np.isnan(forward)
-        if missing.any():
-            speed = np.where(missing, block.speed_mps, np.nan)
-            forward = np.where(missing, self._speed_rate.process(speed, dt_s), forward)
-        else:
-            self._speed_rate.reset()
-        missing = np.isnan(normal)
-        if missing.any():
-            mapped = self._mapped_normal(block, located, bank, dt_s, missing)
-            normal = np.where(missing, mapped, normal)
-            side = np.where(missing, (block.accel_y_mps2 - sin * mapped) / cos, side)
-        else:
-            for rate in self._motion:
-                rate.reset()
-        return forward, side, normal
-
-    def _mapped_normal(
-        self,
-        block: FrameBlock,
-        located: Located,
-        bank: Bank,
-        dt_s: FloatArray,
-        missing: BoolArray,
-    ) -> FloatArray:
-        """Return the normal specific force where it is missing; elsewhere it is not defined."""
-        known = np.where(np.isfinite(located.lateral_m), located.lateral_m, 0.0)
-        offset = np.where(missing, known - self._axis_m, np.nan)
-        roll_rate = self._motion[0].process(np.where(missing, bank.map_roll_rad, np.nan), dt_s)
-        roll_acceleration = self._motion[1].process(roll_rate, dt_s)
-        offset_rate = self._motion[2].process(offset, dt_s)
-        offset_acceleration = self._motion[3].process(offset_rate, dt_s)
-        heading_rate = block.yaw_rate_radps / np.cos(bank.map_roll_rad)
-        return normal_specific_force(
-            bank.map_roll_rad, roll_rate, roll_acceleration,
-            offset, offset_rate, offset_acceleration, block.speed_mps, heading_rate,
-        )  # fmt: skip
+        side = cos * block.accel_y_mps2 - sin * upward
+        return forward, side, sin * block.accel_y_mps2 + cos * upward
 
     def _streamed_loads(
         self, block: FrameBlock, modeled: FloatArray, defined: BoolArray
@@ -155,17 +139,22 @@ class DemandStage:
         usable = defined & (total > 0.0)
         return np.where(usable, streamed, modeled)
 
-    def _axle_forces(
-        self, side_n: FloatArray, forward_n: FloatArray, yaw_acceleration: FloatArray
-    ) -> tuple[FloatArray, FloatArray]:
-        """Return |force| of front and rear axle."""
+    def _axle_forward(
+        self, forward_n: FloatArray, front_side_n: FloatArray, block: FrameBlock
+    ) -> FloatArray:
+        """Return the forward force of front and rear axle, shape (2, n).
+
+        Steered front tires lean their side force back, and the driven axle makes up for it.
+        Drive and engine braking come through the driven axle; the car file shares the brakes.
+        """
         car = self._car
-        front_side, rear_side = axle_side_forces(car, side_n, yaw_acceleration)
-        drive_front = {"front": 1.0, "rear": 0.0, "all": 0.5}[car.drive]
-        share = np.where(forward_n >= 0.0, drive_front, car.brake_front_share)
-        front = np.hypot(front_side, share * forward_n)
-        rear = np.hypot(rear_side, (1.0 - share) * forward_n)
-        return front, rear
+        steered = np.where(np.isfinite(block.steer_rad), block.steer_rad, 0.0) / car.steering_ratio
+        drag_n = front_side_n * steered
+        torque_n = forward_n + drag_n
+        driven = {"front": 1.0, "rear": 0.0, "all": 0.5}[car.drive]
+        braking = (torque_n < 0.0) & ~(block.brake < PEDAL_REST)
+        front = np.where(braking, car.brake_front_share, driven) * torque_n - drag_n
+        return np.stack([front, forward_n - front])
 
 
 def _demand(
@@ -173,29 +162,55 @@ def _demand(
     side_n: FloatArray,
     forward_n: FloatArray,
     load: FloatArray,
-    axles: tuple[FloatArray, FloatArray],
+    axle_side: FloatArray,
+    axle_forward: FloatArray,
     car: CarFile,
 ) -> Demand:
     demand = np.hypot(forward_n, side_n) / normal_n
     friction = peak_friction(car.tire, load)
     grip = friction * load
-    grip_front, grip_rear = grip[0] + grip[1], grip[2] + grip[3]
-    load_front, load_rear = load[0] + load[1], load[2] + load[3]
-    asked = demand * (load_front + load_rear) / (grip_front + grip_rear)
-    front, rear = axles
-    force = np.empty_like(load)
-    np.multiply(front, load[:2], out=force[:2])
-    np.multiply(rear, load[2:], out=force[2:])
-    force[:2] /= np.maximum(load_front, 1.0)
-    force[2:] /= np.maximum(load_rear, 1.0)
+    axle_load, axle_grip = load[::2] + load[1::2], grip[::2] + grip[1::2]
+    asked = demand * (axle_load[0] + axle_load[1]) / (axle_grip[0] + axle_grip[1])
+    axle_force = np.hypot(axle_side, axle_forward)
+    used = np.minimum(axle_force / np.maximum(axle_grip, 1.0), MAX_UTILIZATION)
     return Demand(
         demand=demand,
         side=side_n / normal_n,
         utilization=np.minimum(asked, MAX_UTILIZATION),
         saturated=asked > MAX_UTILIZATION,
-        front_utilization=np.minimum(front / np.maximum(grip_front, 1.0), MAX_UTILIZATION),
-        rear_utilization=np.minimum(rear / np.maximum(grip_rear, 1.0), MAX_UTILIZATION),
+        front_utilization=used[0],
+        rear_utilization=used[1],
         load_n=load,
-        force_n=force,
+        force_n=_tire_forces(axle_side, axle_forward, used, load, friction),
         friction=friction,
     )
+
+
+def _tire_forces(
+    axle_side: FloatArray,
+    axle_forward: FloatArray,
+    used: FloatArray,
+    load: FloatArray,
+    friction: FloatArray,
+) -> FloatArray:
+    """Return the magnitude of each tire's force, shape (4, n).
+
+    A wheel passes on no more drive or braking than it grips; its neighbor takes the rest.
+    """
+    grip = friction * load
+    axle_load = load[::2] + load[1::2]
+    axle_friction = (grip[::2] + grip[1::2]) / np.maximum(axle_load, 1.0)
+    stiff = load * (
+        1.0 + _pairs(friction_exponent(used)) * (friction / _pairs(axle_friction) - 1.0)
+    )
+    side = stiff * _pairs(axle_side / np.maximum(stiff[::2] + stiff[1::2], 1.0))
+    half = _pairs(0.5 * axle_forward)
+    gripped = np.minimum(np.maximum(half, -grip), grip)
+    forward = gripped + (half - gripped)[[1, 0, 3, 2]]
+    force: FloatArray = np.hypot(side, forward)
+    return force
+
+
+def _pairs(axles: FloatArray) -> FloatArray:
+    """Give both wheels of an axle the axle's value: from shape (2, n) to (4, n)."""
+    return np.repeat(axles, 2, axis=0)
