@@ -42,7 +42,7 @@ def test_a_lap_is_one_line() -> None:
     console.event(lap(7))
     assert screen.getvalue().split() == ["lap", "7", "32.500", "s", "tires", "100", "kJ"]
     console.event(lap(8, None))
-    assert "part" in screen.getvalue().splitlines()[1]
+    assert screen.getvalue().splitlines()[1] == "lap   8     part    tires   100 kJ"
 
 
 def test_the_status_line_stands_below_the_lines_that_stay() -> None:
@@ -53,6 +53,20 @@ def test_the_status_line_stands_below_the_lines_that_stay() -> None:
     console.status("there")
     console.close()
     assert screen.getvalue().replace("\r    \r", "<") == "here<news\nhere<there\r     \r"
+
+
+def test_a_status_line_stays_on_its_row_however_narrow(monkeypatch: pytest.MonkeyPatch) -> None:
+    columns = [20]
+    monkeypatch.setattr(Console, "_columns", lambda console: columns[0])
+    screen = Screen()
+    console = Console(screen)
+    console.status("x" * 50)
+    assert screen.getvalue() == "x" * 19
+    console.status("x" * 50)
+    assert screen.getvalue() == "x" * 19
+    columns[0] = 10
+    console.status("y" * 50)
+    assert screen.getvalue() == "x" * 19 + "\r" + " " * 9 + "\r" + "y" * 9
 
 
 def test_no_status_where_there_is_no_terminal() -> None:

@@ -20,6 +20,8 @@ from canticle_daemon.runtime.engine import summary_of
 
 WAITING_TEXTS = 200
 CLOSE_WAIT_S = 0.2
+WIDTH = 80
+"""Columns of a terminal that does not tell."""
 PIECE = 1000
 """A pipe that is ready takes 4,096 bytes (POSIX: PIPE_BUF is at least 512; Linux, macOS more)."""
 
@@ -37,7 +39,7 @@ class Console:
         self._stream = sys.stdout if stream is None else stream
         self._live = self._stream.isatty()
         self._waits: deque[str] = deque(maxlen=WAITING_TEXTS)
-        self._status = ""
+        self._asked = self._status = ""
         self._entries: list[str] = []
 
     def line(self, text: str) -> None:
@@ -46,9 +48,11 @@ class Console:
 
     def status(self, text: str) -> None:
         """Replace the status line."""
-        if self._live and text != self._status:
-            self._write(self._erased() + text)
-            self._status = text
+        if self._live and text != self._asked:
+            self._asked = text
+            shown = text[: self._columns() - 1]
+            self._write(self._erased() + shown)
+            self._status = shown
         elif self._waits:
             self._hand_over()
 
@@ -60,20 +64,29 @@ class Console:
             time_s = f"{event.lap_time_s:7.3f} s" if event.lap_time_s is not None else "   part  "
             spent = sum(event.tire_energy_j) / 1000.0
             entries = " · ".join(self._entries)
-            self.line(f"lap {event.lap:>3}  {time_s}  tires {spent:5.0f} kJ  {entries}")
+            said = f"lap {event.lap:>3}  {time_s}  tires {spent:5.0f} kJ  {entries}"
+            self.line(said.rstrip())
             self._entries.clear()
 
     def close(self) -> None:
         """Leave the terminal on a fresh line, and give a slow one a last chance."""
         self._write(self._erased())
-        self._status = ""
+        self._asked = self._status = ""
         until = time.monotonic() + CLOSE_WAIT_S
         while self._waits and time.monotonic() < until:
             time.sleep(0.01)
             self._hand_over()
 
     def _erased(self) -> str:
-        return "\r" + " " * len(self._status) + "\r" if self._status else ""
+        width = min(len(self._status), self._columns() - 1)
+        return "\r" + " " * width + "\r" if width else ""
+
+    def _columns(self) -> int:
+        """Return the terminal's width now: a longer status line would not stay on its row."""
+        try:
+            return os.get_terminal_size(self._stream.fileno()).columns or WIDTH
+        except (OSError, ValueError):
+            return WIDTH
 
     def _write(self, text: str) -> None:
         self._waits.extend(text[at : at + PIECE] for at in range(0, len(text), PIECE))

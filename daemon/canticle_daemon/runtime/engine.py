@@ -126,5 +126,5 @@ class Engine:
 def summary_of(event: Event) -> str:
     """Return a turn-in or an entry in a few words for the terminal."""
     if isinstance(event, Entry | TurnIn) and event.margin_m is not None:
-        return f"{event.corner}: {event.verdict} {event.margin_m:+.0f} m"
+        return f"{event.corner}: {event.verdict} {round(event.margin_m):+d} m"
     return ""
