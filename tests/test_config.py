@@ -79,6 +79,7 @@ def test_a_file_saved_with_a_byte_order_mark_is_read(tmp_path: Path) -> None:
         ("[input]\nbnid = 'x'\n", ["input.bnid", "did you mean 'bind'"]),
         ("[inputs]\nbind = 'x'\n", ["'inputs'", "did you mean 'input'"]),
         ("[coach]\nzzz = 1\n", ["coach.zzz", "known:", "tolerance_m"]),
+        ("[coach]\nzzz = 1\nyyy = 2\n", ["run_laps); unknown key 'coach.yyy'"]),
         ("[coach]\ntolerance_m = nan\n", ["coach.tolerance_m", "finite"]),
         ("[coach]\nwindow_m = inf\n", ["coach.window_m", "finite"]),
         ("[coach]\ntolerance_m = -1\n", ["coach.tolerance_m"]),
@@ -92,7 +93,7 @@ def test_a_file_saved_with_a_byte_order_mark_is_read(tmp_path: Path) -> None:
         ("[adapter]\n'a\\nb' = 1\n\"c\\nd\" = 2\n", ["adapter"]),
         ("[track]\nfile = '~no-such-user-here/x'\n", ["track.file", "home folder"]),
     ],
-    ids=range(15),
+    ids=range(16),
 )
 def test_a_wrong_file_is_one_line_with_its_key(
     tmp_path: Path, text: str | bytes, parts: list[str]

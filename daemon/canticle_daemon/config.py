@@ -191,10 +191,13 @@ def validate(model: type[ModelT], data: Mapping[str, Any], where: str) -> ModelT
 
 
 def _faults(error: ValidationError, model: type[BaseModel]) -> Iterator[str]:
+    suggested: set[str] = set()
     for fault in error.errors(include_url=False):
         place = ".".join(str(part) for part in fault["loc"])
         if fault["type"] == "extra_forbidden":
-            yield f"unknown key {place!r}{_suggestion(model, fault['loc'])}"
+            hint = _suggestion(model, fault["loc"])
+            yield f"unknown key {place!r}{'' if hint in suggested else hint}"
+            suggested.add(hint)  # a list of all keys is said once
             continue
         message = fault["msg"].removeprefix("Value error, ")
         message = message[:1].lower() + message[1:]

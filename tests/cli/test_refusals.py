@@ -190,6 +190,14 @@ class TestFiles:
         assert str(targets) in line
         assert "Turn 9" in line
 
+    def test_a_layout_for_an_adapter_that_takes_none(self, refusal: Refusals) -> None:
+        line = refusal.of_run("--layout", "layout.toml")
+        assert line.endswith("--layout: adapter 'json' takes none (--adapter packed does)")
+
+    def test_a_wrong_option_points_to_the_help_of_its_command(self, refusal: Refusals) -> None:
+        assert refusal.of("rehearse", "--lap", "3").endswith("(see canticle rehearse --help)")
+        assert refusal.of("rehears").endswith("(see canticle --help)")
+
     def test_an_adapter_that_is_not_known(self, tmp_path: Path, refusal: Refusals) -> None:
         line = refusal.of_run("--adapter", "telepathy")
         assert line.endswith("no adapter named 'telepathy'; known: json, packed, recording")

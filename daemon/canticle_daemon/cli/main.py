@@ -68,7 +68,9 @@ def _usage_text(error: Exception) -> str | None:
     format_message = getattr(error, "format_message", None)
     if format_message is None:
         return None
-    return f"{' '.join(str(format_message()).split())} (see canticle --help)"
+    context = getattr(error, "ctx", None)
+    command = "" if context is None else f" {context.info_name}" if context.parent else ""
+    return f"{' '.join(str(format_message()).split())} (see canticle{command} --help)"
 
 
 def _fail(text: str, code: int) -> int:

@@ -9,20 +9,26 @@ from typing import Annotated, Any
 import typer
 
 from canticle_daemon.config import Config, load_config
+from canticle_daemon.errors import ConfigError
 
-ConfigOption = Annotated[Path | None, typer.Option("--config", help="Settings in TOML.")]
+ConfigOption = Annotated[
+    Path | None, typer.Option("--config", help="Settings file; options win over it.")
+]
 BindOption = Annotated[
     str | None, typer.Option("--bind", metavar="HOST:PORT", help="UDP port to listen on.")
 ]
 AdapterOption = Annotated[
-    str | None, typer.Option("--adapter", metavar="NAME", help="Telemetry format.")
+    str | None,
+    typer.Option(
+        "--adapter", metavar="NAME", help="Telemetry format: json, packed, or one of your own."
+    ),
 ]
 LayoutOption = Annotated[
     Path | None, typer.Option("--layout", help="Layout file of the packed adapter.")
 ]
 TrackOption = Annotated[Path | None, typer.Option("--track", help="Track file.")]
 CarOption = Annotated[Path | None, typer.Option("--car", help="Car file.")]
-TargetsOption = Annotated[Path | None, typer.Option("--targets", help="The coach's turn-in marks.")]
+TargetsOption = Annotated[Path | None, typer.Option("--targets", help="A coach's turn-in marks.")]
 RunLapsOption = Annotated[
     int | None, typer.Option("--run-laps", help="Laps that a set of tires must last.")
 ]
@@ -34,10 +40,10 @@ PublishOption = Annotated[
     str | None, typer.Option("--publish", metavar="ENDPOINT", help="ZeroMQ endpoint to publish on.")
 ]
 SessionsOption = Annotated[
-    Path | None, typer.Option("--sessions", help="Parent folder of session folders.")
+    Path | None, typer.Option("--sessions", help="Folder in which each session gets its own.")
 ]
 SessionOption = Annotated[
-    Path | None, typer.Option("--session", help="This session's own, new or empty folder.")
+    Path | None, typer.Option("--session", help="The very folder for this session, new or empty.")
 ]
 
 
@@ -57,7 +63,13 @@ def settings(
     sessions: Path | None = None,
     defaults: Mapping[str, Any] | None = None,
 ) -> Config:
-    """Merge the config file with the options, and with a command's own `defaults`."""
+    """Merge the config file with the options, and with a command's own `defaults`.
+
+    Raises
+    ------
+    ConfigError
+        One of them is wrong.
+    """
     options: dict[str, Any] = {
         "input.bind": bind,
         "input.adapter": adapter,
@@ -71,4 +83,8 @@ def settings(
         "bus.publish": publish,
         "log.sessions": sessions,
     }
-    return load_config(config, options, defaults)
+    merged = load_config(config, options, defaults)
+    name = merged.input.adapter
+    if layout is not None and name in ("json", "recording"):
+        raise ConfigError(f"--layout: adapter {name!r} takes none (--adapter packed does)")
+    return merged

@@ -26,7 +26,7 @@ def rehearse(
         int | None, typer.Option("--laps", min=1, help="Laps to drive; default: until Ctrl-C.")
     ] = None,
     pace: Annotated[
-        str, typer.Option("--pace", help="1 is real time; max is as fast as can be.")
+        str, typer.Option("--pace", help="1 is real time; max is as fast as nothing is lost.")
     ] = "1",
     seed: Annotated[int, typer.Option("--seed", help="The same seed gives the same laps.")] = 1,
     rate: Annotated[
