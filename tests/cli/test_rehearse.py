@@ -25,7 +25,15 @@ def test_laps_at_full_pace_lose_nothing_and_end_by_themselves(tmp_path: Path) ->
     assert types[-1] == "session_ended"
     assert {"turn_in", "entry", "corner", "lap_completed"} <= set(types)
     assert "discontinuity" not in types
+    events = events_of(session)
+    corners = [event for event in events if event["type"] == "corner"]
+    # This driver is off the throttle for every corner, for some of them before the entry's start.
+    assert None in [corner["lift_station_m"] for corner in corners]
+    assert None not in [corner["throttle_station_m"] for corner in corners]
+    (whole,) = [event for event in events if event["type"] == "lap_completed" and event["lap"] == 2]
+    assert events[-1]["time_s"] > whole["time_s"]  # the car drives on past the line
     facts = json.loads((session / "session.json").read_text())
+    assert facts["processes"]["rehearsal"]["state"] == "done"
     assert (facts["dropped"], facts["bad_datagrams"], facts["foreign"]) == (0, 0, 0)
     assert facts["frames"] > 2 * 20 * 30  # two laps of 20 s or more
 

@@ -54,6 +54,14 @@ def test_session_json_tells_what_ran_and_when_it_ended(tmp_path: Path) -> None:
     assert sorted(path.name for path in tmp_path.iterdir()) == ["events.jsonl", "session.json"]
 
 
+def test_session_json_has_a_row_of_numbers_on_a_line(tmp_path: Path) -> None:
+    facts = {"profile": [[0.0, 4.5, 1e-6], [5.0, -4.5, 0.0]], "note": "[1,  2]", "none": []}
+    Recorder(tmp_path, facts).close()
+    text = (tmp_path / "session.json").read_text()
+    assert json.loads(text).items() >= facts.items()
+    assert "[ 5.0, -4.5, 0.0 ]" in text
+
+
 def test_a_folder_that_holds_something_is_refused_and_left_alone(tmp_path: Path) -> None:
     (tmp_path / "mine.txt").write_text("keep")
     with pytest.raises(ConfigError, match="is not empty"):

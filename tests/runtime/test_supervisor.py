@@ -122,6 +122,11 @@ def test_without_restart_a_failure_is_final(start: Start) -> None:
     assert child.restarts == 0
 
 
+def test_a_child_that_runs_once_is_done_at_its_end(start: Start) -> None:
+    child = start("pass", restart=False)
+    until(lambda: child.state == "done", "done")
+
+
 def test_a_program_that_cannot_be_started_is_a_failure(start: Start) -> None:
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(sys, "executable", "/no/such/python")

@@ -185,7 +185,7 @@ class Daemon:
 
     def _sender_done(self, now: float) -> bool:
         sender = self.sender
-        if sender is None or sender.state not in ("unavailable", "closed", "failed"):
+        if sender is None or sender.state not in ("done", "closed", "failed"):
             return False
         return now - self._heard > QUIET_END_S or self._newest is None
 

@@ -10,6 +10,7 @@ import contextlib
 import errno
 import os
 import platform
+import re
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
@@ -19,6 +20,9 @@ import msgspec
 from canticle_daemon import __version__
 from canticle_daemon.errors import ConfigError, SystemFaultError
 from canticle_daemon.messages import Event, encode
+
+_NUMBERS = re.compile(rb"\[\n[\s\d.,eE+-]*\]")
+"""A list of numbers: a track's profile is easier to read a row a line."""
 
 
 def wall_time() -> str:
@@ -116,6 +120,7 @@ class Recorder:
         path = self.folder / "session.json"
         partial = path.with_suffix(".json.part")
         text = msgspec.json.format(msgspec.json.encode(self._facts, enc_hook=str), indent=2)
+        text = _NUMBERS.sub(lambda row: b" ".join(row[0].split()), text)
         partial.write_bytes(text + b"\n")
         partial.replace(path)
 

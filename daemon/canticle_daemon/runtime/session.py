@@ -63,6 +63,7 @@ class Session:
         """Tell the events of one wake."""
         for event in result.events:
             self.tell(event)
+        self._time_s = result.frames[-1].time_s
 
     def close(self, reason: str, **facts: Any) -> None:
         """Write the last event and complete the folder."""

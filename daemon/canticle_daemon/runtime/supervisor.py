@@ -32,7 +32,8 @@ class Child:
     """One supervised process, ``python -m MODULE ARGUMENT…``.
 
     Its standard output carries one JSON object a line with `state` and `detail`. It ends with 0
-    when it cannot work here and with 3 when the user closed it: then it is left in peace.
+    when it cannot work here (or is done, if it is never restarted) and with 3 when the user
+    closed it: then it is left in peace.
 
     Parameters
     ----------
@@ -46,7 +47,7 @@ class Child:
     Attributes
     ----------
     state
-        `starting`, what the child says of itself, `failed`, or `closed`.
+        `starting`, what the child says of itself, `done`, `failed`, or `closed`.
     detail
         One plain sentence.
     last_words
@@ -110,17 +111,21 @@ class Child:
             code = self._run_once()
             if self._stop.is_set():
                 break
-            if code in (0, CLOSED_BY_USER):
-                self.state = "unavailable" if code == 0 else "closed"
-                return
-            if not self._restart:
-                self.state = "failed"
+            if code in (0, CLOSED_BY_USER) or not self._restart:
+                self.state = self._last_state(code)
                 return
             if time.monotonic() - begun > STEADY_S:
                 tries = 0
             self._note_failure(code)
             self._stop.wait(self._backoff_s[min(tries, len(self._backoff_s) - 1)])
             tries += 1
+
+    def _last_state(self, code: int | None) -> str:
+        if code == CLOSED_BY_USER:
+            return "closed"
+        if code == 0:
+            return "unavailable" if self._restart else "done"
+        return "failed"
 
     def _note_failure(self, code: int | None) -> None:
         how = "could not be started" if code is None else f"ended with status {code}"

@@ -659,9 +659,11 @@ def _pedals(inside: FloatArray) -> Iterator[float | None]:
     lifted = (throttle[:-1] >= 0.9) & (throttle[1:] < 0.9)
     yield _first(way[1:], lifted)
     yield _first(way, brake > 0.05)
-    closed = int(np.nanargmin(throttle)) if np.isfinite(throttle).any() else 0
+    known = np.isfinite(throttle).any()
+    closed = int(np.nanargmin(throttle)) if known else 0
     back = (throttle > 0.5) & (np.arange(throttle.size) > closed)
-    yield _first(way, back if lifted.any() else np.zeros_like(back))
+    was_off = known and throttle[closed] < 0.9  # be it since before the entry's start
+    yield _first(way, back if was_off else np.zeros_like(back))
 
 
 def _first(way: FloatArray, where: np.ndarray[tuple[int, ...], np.dtype[np.bool_]]) -> float | None:
