@@ -25,6 +25,10 @@ _NUMBERS = re.compile(rb"\[\n[\s\d.,eE+-]*\]")
 """A list of numbers: a track's profile is easier to read a row a line."""
 
 
+# On Windows a descriptor would turn each line end into two characters.
+APPEND = os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_APPEND | getattr(os, "O_BINARY", 0)
+
+
 def wall_time() -> str:
     """Return now as ISO 8601 UTC with milliseconds."""
     return datetime.now(UTC).isoformat(timespec="milliseconds").replace("+00:00", "Z")
@@ -60,9 +64,7 @@ class Recorder:
             if any(folder.iterdir()):
                 raise ConfigError(f"session folder {folder} is not empty; name a new one")
             self._write_facts()
-            self._file = os.open(
-                folder / "events.jsonl", os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_APPEND, 0o644
-            )
+            self._file = os.open(folder / "events.jsonl", APPEND, 0o644)
         except OSError as error:
             raise ConfigError(
                 f"session folder {folder} cannot be made: {error.strerror or error}"
