@@ -20,6 +20,8 @@ from canticle_daemon.runtime.engine import summary_of
 
 WAITING_TEXTS = 200
 CLOSE_WAIT_S = 0.2
+KEY_ECHO = "^C"
+"""What a terminal writes behind the status line when it is asked to end."""
 WIDTH = 80
 """Columns of a terminal that does not tell."""
 PIECE = 1000
@@ -50,7 +52,7 @@ class Console:
         """Replace the status line."""
         if self._live and text != self._asked:
             self._asked = text
-            shown = text[: self._columns() - 1]
+            shown = text[: self._columns() - 1 - len(KEY_ECHO)]
             self._write(self._erased() + shown)
             self._status = shown
         elif self._waits:
@@ -78,8 +80,10 @@ class Console:
             self._hand_over()
 
     def _erased(self) -> str:
-        width = min(len(self._status), self._columns() - 1)
-        return "\r" + " " * width + "\r" if width else ""
+        if not self._status:
+            return ""
+        width = min(len(self._status + KEY_ECHO), self._columns() - 1)
+        return "\r" + " " * width + "\r"
 
     def _columns(self) -> int:
         """Return the terminal's width now: a longer status line would not stay on its row."""
