@@ -185,7 +185,7 @@ def friction_exponent(utilization: Values) -> FloatArray:
         d ln F/d ln μ = ψ·(1 − ⅔ψ)/(1 − ψ + ⅓ψ²) with ψ = 1 − (1 − u)^⅓: 0 where the tire
         hardly slides and stiffness alone counts, 1 where it slides all over.
     """
-    psi = _slip_share(np.clip(utilization, 0.0, MAX_UTILIZATION))
+    psi = _slip_share(np.minimum(utilization, MAX_UTILIZATION))
     exponent: FloatArray = psi * (1.0 - psi * (2.0 / 3.0)) / (1.0 - psi + psi * psi / 3.0)
     return exponent
 

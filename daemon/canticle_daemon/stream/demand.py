@@ -99,7 +99,8 @@ class DemandStage:
         yaw_acceleration = self._yaw_acceleration.process(block.yaw_rate_radps, dt_s)
         modeled = wheel_loads(car, normal_n, side_n, forward_n, down_front, down_rear)
         load = self._streamed_loads(block, modeled, defined)
-        axle_side = np.stack(axle_side_forces(car, side_n, yaw_acceleration))
+        axle_side = np.empty((2, side_n.size))
+        axle_side[0], axle_side[1] = axle_side_forces(car, side_n, yaw_acceleration)
         axle_forward = self._axle_forward(forward_n, axle_side[0], block)
         return _demand(normal_n, side_n, forward_n, load, axle_side, axle_forward, car)
 
@@ -147,14 +148,15 @@ class DemandStage:
         Steered front tires lean their side force back, and the driven axle makes up for it.
         Drive and engine braking come through the driven axle; the car file shares the brakes.
         """
-        car = self._car
-        steered = np.where(np.isfinite(block.steer_rad), block.steer_rad, 0.0) / car.steering_ratio
-        drag_n = front_side_n * steered
+        car, steer = self._car, block.steer_rad
+        drag_n = front_side_n * np.where(steer == steer, steer / car.steering_ratio, 0.0)
         torque_n = forward_n + drag_n
         driven = {"front": 1.0, "rear": 0.0, "all": 0.5}[car.drive]
         braking = (torque_n < 0.0) & ~(block.brake < PEDAL_REST)
-        front = np.where(braking, car.brake_front_share, driven) * torque_n - drag_n
-        return np.stack([front, forward_n - front])
+        axles = np.empty((2, forward_n.size))
+        axles[0] = np.where(braking, car.brake_front_share, driven) * torque_n - drag_n
+        np.subtract(forward_n, axles[0], out=axles[1])
+        return axles
 
 
 def _demand(
@@ -171,8 +173,8 @@ def _demand(
     grip = friction * load
     axle_load, axle_grip = load[::2] + load[1::2], grip[::2] + grip[1::2]
     asked = demand * (axle_load[0] + axle_load[1]) / (axle_grip[0] + axle_grip[1])
-    axle_force = np.hypot(axle_side, axle_forward)
-    used = np.minimum(axle_force / np.maximum(axle_grip, 1.0), MAX_UTILIZATION)
+    used = np.hypot(axle_side, axle_forward) / np.maximum(axle_grip, 1.0)
+    used = np.minimum(used, MAX_UTILIZATION)
     return Demand(
         demand=demand,
         side=side_n / normal_n,
@@ -193,24 +195,18 @@ def _tire_forces(
     load: FloatArray,
     friction: FloatArray,
 ) -> FloatArray:
-    """Return the magnitude of each tire's force, shape (4, n).
+    """Return the magnitude of each tire's force, shape (4, n), from the axles', shape (2, n).
 
     A wheel passes on no more drive or braking than it grips; its neighbor takes the rest.
     """
+    load, friction = load.reshape(2, 2, -1), friction.reshape(2, 2, -1)
     grip = friction * load
-    axle_load = load[::2] + load[1::2]
-    axle_friction = (grip[::2] + grip[1::2]) / np.maximum(axle_load, 1.0)
-    stiff = load * (
-        1.0 + _pairs(friction_exponent(used)) * (friction / _pairs(axle_friction) - 1.0)
-    )
-    side = stiff * _pairs(axle_side / np.maximum(stiff[::2] + stiff[1::2], 1.0))
-    half = _pairs(0.5 * axle_forward)
+    axle_friction = (grip[:, 0] + grip[:, 1]) / np.maximum(load[:, 0] + load[:, 1], 1.0)
+    follows = friction_exponent(used)
+    # The force at one slip, by load where little is used and by grip where all is.
+    share = load * ((1.0 - follows)[:, None] * axle_friction[:, None] + follows[:, None] * friction)
+    side = share * (axle_side / np.maximum(share[:, 0] + share[:, 1], 1.0))[:, None]
+    half = 0.5 * axle_forward[:, None]
     gripped = np.minimum(np.maximum(half, -grip), grip)
-    forward = gripped + (half - gripped)[[1, 0, 3, 2]]
-    force: FloatArray = np.hypot(side, forward)
-    return force
-
-
-def _pairs(axles: FloatArray) -> FloatArray:
-    """Give both wheels of an axle the axle's value: from shape (2, n) to (4, n)."""
-    return np.repeat(axles, 2, axis=0)
+    force: FloatArray = np.hypot(side, gripped + (half - gripped)[:, ::-1])
+    return force.reshape(4, -1)
