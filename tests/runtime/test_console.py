@@ -68,6 +68,9 @@ def test_a_status_line_stays_on_its_row_however_narrow(monkeypatch: pytest.Monke
     columns[0] = 10
     console.status("y" * 50)
     assert screen.getvalue() == "x" * 17 + "\r" + " " * 9 + "\r" + "y" * 7
+    columns[0] = 20
+    console.status("z")
+    assert screen.getvalue().endswith("y" * 7 + "\r" + " " * 19 + "\r" + "z")
 
 
 def test_no_status_where_there_is_no_terminal() -> None:

@@ -42,11 +42,13 @@ class Console:
         self._live = self._stream.isatty()
         self._waits: deque[str] = deque(maxlen=WAITING_TEXTS)
         self._asked = self._status = ""
+        self._longest = 0  # on this row: after a narrower and a wider window all of it shows again
         self._entries: list[str] = []
 
     def line(self, text: str) -> None:
         """Write a line that stays."""
         self._write(self._erased() + text + "\n" + self._status)
+        self._longest = len(self._status)
 
     def status(self, text: str) -> None:
         """Replace the status line."""
@@ -54,7 +56,7 @@ class Console:
             self._asked = text
             shown = text[: self._columns() - 1 - len(KEY_ECHO)]
             self._write(self._erased() + shown)
-            self._status = shown
+            self._status, self._longest = shown, max(len(shown), self._longest)
         elif self._waits:
             self._hand_over()
 
@@ -82,7 +84,7 @@ class Console:
     def _erased(self) -> str:
         if not self._status:
             return ""
-        width = min(len(self._status + KEY_ECHO), self._columns() - 1)
+        width = min(self._longest + len(KEY_ECHO), self._columns() - 1)
         return "\r" + " " * width + "\r"
 
     def _columns(self) -> int:
