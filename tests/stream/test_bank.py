@@ -118,3 +118,39 @@ def test_the_transition_is_followed() -> None:
         truth = np.interp(station, truth_of[:, 0], truth_of[:, 1], period=track.length_m)
         error = np.degrees(estimates(frames, track, CarFile()).bank_rad) - truth
         assert float(np.sqrt(np.mean(error**2))) < limit
+
+
+def corrected(*, told: bool, wave_hz: float = 0.5) -> list[Frame]:
+    """A driver who keeps correcting: side velocity swings, and its rate adds to f_y alone."""
+    frames, wave = [], 2.0 * math.pi * wave_hz
+    for frame in steady(60.0, 250.0, BANK_DEG, seconds=20.0):
+        swing = wave * frame.time_s
+        frames.append(
+            msgspec.structs.replace(
+                frame,
+                accel_y_mps2=frame.accel_y_mps2 + 1.2 * wave * math.cos(swing),
+                vel_y_mps=1.2 * math.sin(swing) if told else NAN,
+            )
+        )
+    return frames
+
+
+def rms_deg(frames: list[Frame], track: Track | None) -> float:
+    error = settled(estimates(frames, track).bank_rad) - BANK_DEG
+    return float(np.sqrt(np.mean(error**2)))
+
+
+def test_side_velocity_is_not_taken_for_bank() -> None:
+    """Its rate of ±3.8 m/s² reads as ±24° of bank in a sample."""
+    ringed = ring(250.0, BANK_DEG)
+    assert rms_deg(corrected(told=True), ringed) < 0.3
+    assert rms_deg(corrected(told=True), None) < 1.0
+    assert rms_deg(corrected(told=False), ringed) < 1.5
+    assert rms_deg(corrected(told=False), None) > 5.0  # nobody can tell it from the road
+
+
+def test_what_cannot_be_told_from_the_road_widens_the_spread() -> None:
+    unsure = np.degrees(estimates(corrected(told=False)).bank_std_rad)[300:]
+    sure = np.degrees(estimates(corrected(told=True)).bank_std_rad)[300:]
+    assert float(np.median(unsure)) > 5.0
+    assert float(np.median(sure)) < 1.5

@@ -24,7 +24,8 @@ import numpy as np
 from canticle_daemon.frame import FloatArray, Frame, FrameBlock, IntArray, Wheels
 from canticle_daemon.messages import Context, Corner, Entry, Event, Phase, TurnIn, Verdict
 from canticle_daemon.physics.car import CarFile
-from canticle_daemon.stream.bank import GRAVITY_MPS2, Bank
+from canticle_daemon.physics.road import GRAVITY_MPS2
+from canticle_daemon.stream.bank import Bank
 from canticle_daemon.stream.demand import Demand
 from canticle_daemon.stream.locate import Located
 from canticle_daemon.stream.spend import Spend
