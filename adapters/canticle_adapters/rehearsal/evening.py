@@ -72,7 +72,7 @@ class Evening:
     stops: int | None = None
     cautions: int | None = None
     caution_laps: tuple[int, int] = (2, 4)
-    traffic_share: float = 0.18
+    traffic_share: float = 0.20
     lanes: bool = True
     bumps: int = 1
     slow_laps: int = 1
@@ -93,9 +93,9 @@ class Lane:
 
 
 LANES = (
-    Lane("low", -1.8, 2.4, 2.0),
+    Lane("low", -1.8, 2.9, 2.0),
     Lane("middle", -3.7, -1.2, 8.0),
-    Lane("high", -5.5, -4.6, 14.0),
+    Lane("high", -5.5, -5.3, 14.0),
 )
 
 
@@ -333,7 +333,7 @@ class Script:
         lap = 2
         while lap < self.laps:
             length = draw.randint(1, 3)
-            if draw.random() < self.evening.traffic_share / 2.0 * 1.1:
+            if draw.random() < 0.75 * self.evening.traffic_share:
                 for following in range(lap, min(lap + length, self.laps)):
                     if following not in self._taken:
                         self._meet(company, following)

@@ -142,11 +142,12 @@ class Pit:
 
     def watching(self, time_s: float) -> bool:
         """Return whether a replay is being watched."""
-        return 3.0 <= time_s - self.since_s < 3.0 + self.stop.replay_s
+        return 0.0 <= time_s - self.since_s - self.stop.stand_s < self.stop.replay_s
 
     def over(self, time_s: float) -> bool:
         """Return whether the car may leave."""
-        return time_s - self.since_s >= self.stop.stand_s + self.stop.replay_s
+        watched_s = self.stop.replay_s + 1.0 if self.stop.replay_s else 0.0
+        return time_s - self.since_s >= self.stop.stand_s + watched_s
 
 
 class EveningDriver(Driver):
