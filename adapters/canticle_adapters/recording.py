@@ -68,6 +68,8 @@ def _is_whole(datagram: bytes) -> bool:
 
 
 def _check_head(path: Path) -> None:
+    if path.is_dir():
+        raise LogFormatError(f"{path}: is a folder; name a .jsonl file of native datagrams")
     try:
         with path.open("rb") as file:
             head = file.read(PROBE_BYTES)

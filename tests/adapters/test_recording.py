@@ -78,6 +78,6 @@ def test_another_kind_of_file_is_refused_by_name_and_line(
 
 
 def test_a_missing_file_and_a_folder_are_named_at_once(tmp_path: Path):
-    for path in (tmp_path / "none.jsonl", tmp_path):
-        with pytest.raises(LogFormatError, match="cannot be read"):
+    for path, match in ((tmp_path / "none.jsonl", "cannot be read"), (tmp_path, "is a folder")):
+        with pytest.raises(LogFormatError, match=match):
             read_datagrams(path)
