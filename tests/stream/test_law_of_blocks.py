@@ -108,6 +108,15 @@ def slowed(frames: list[Frame], at: int, length: int) -> list[Frame]:
     return frames[:at] + slow + frames[at + length :]
 
 
+def trembling(frames: list[Frame], at: int, length: int) -> list[Frame]:
+    """Places go back and forth by up to 20 m, across whatever gate lies there."""
+    moved = [
+        msgspec.structs.replace(f, station_m=(f.station_m + (7 * i % 21) - 10.0) % 2000.0)
+        for i, f in enumerate(frames[at:][:length])
+    ]
+    return frames[:at] + moved + frames[at + length :]
+
+
 def flagged(frames: list[Frame], at: int, length: int) -> list[Frame]:
     told = [
         msgspec.structs.replace(
@@ -120,7 +129,7 @@ def flagged(frames: list[Frame], at: int, length: int) -> list[Frame]:
 
 
 MISHAPS = [
-    *map(without, OPTIONAL), lost, repeated, swapped, rewound, towed, slowed, flagged,
+    *map(without, OPTIONAL), lost, repeated, swapped, rewound, towed, slowed, trembling, flagged,
 ]  # fmt: skip
 
 mishaps = st.lists(

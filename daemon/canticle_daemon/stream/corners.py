@@ -33,6 +33,7 @@ from canticle_daemon.stream.turn_in import (
     LAGS_S,
     LEVEL_S,
     RAMP_TIME_S,
+    SHORT_S,
     WINDOW_S,
     Calibration,
     Knot,
@@ -56,6 +57,10 @@ SETTLE_S = 1.0
 SLOPE_SHARE = 0.85
 """The detector's slope over the driver's median: a slower hand is then still seen in time."""
 SLOW_SHARE = 0.5
+BACK_M = 50.0
+"""A car this little behind a gate it has passed stays past it: places tremble, cars roll back."""
+TURNED_SHARE = 0.3
+"""Steering that rises by this share of the usual ramp is no straight."""
 RAMP_HEIGHT_SHARE = 0.5
 """A level this share of the usual ramp above the straight's is a turn-in, however slow."""
 
@@ -120,6 +125,8 @@ class Pass:
     alarm: TurnIn | None = None
     alarm_score: float = math.nan
     joined: bool = False
+    blind: bool = False
+    """Whether it began before a second of straight was seen."""
 
 
 # Rows of the trace that is kept of a pass; the way is from the transition's start.
@@ -202,7 +209,7 @@ class CornerStage:
         if math.isnan(self._seen_since):
             self._seen_since = float(block.time_s[0])
         relative = (station - self._origin_m) % self._track.length_m
-        part = np.searchsorted(self._gates, relative, side="right") - 1
+        part = self._settled(np.searchsorted(self._gates, relative, side="right") - 1, relative)
         ahead = np.where(part % 4 == Part.STRAIGHT, part // 4 + 1, part // 4) % len(self._corners)
         steering = self._steering.process(block, station)
         side = self._sides[ahead]
@@ -217,6 +224,21 @@ class CornerStage:
             if stop < len(block):
                 events.extend(self._pass_gates(view, stop))
         return events
+
+    def _settled(self, part: IntArray, relative: FloatArray) -> IntArray:
+        """Leave the car in the part it has reached while it is but a little behind its gate."""
+        now, length = self._part, self._track.length_m
+        if (part == now).all():
+            return part
+        settled = part.copy()
+        for frame, reached in enumerate(part.tolist()):
+            if reached != now and now >= 0:
+                behind = (float(self._gates[now]) - float(relative[frame])) % length
+                if behind < BACK_M:
+                    settled[frame] = now
+                    continue
+            now = reached
+        return settled
 
     # --- between gates -------------------------------------------------------------------
 
@@ -277,7 +299,7 @@ class CornerStage:
     def _look(self, view: _View, ramps: Ramps, span: slice) -> TurnIn | None:
         """Find the first frame at which a turn-in is certain enough."""
         here = self._pass
-        if here is None or here.alarm is not None:
+        if here is None or here.blind or here.alarm is not None:
             return None
         side, rest = self._corners[here.corner].side, self._rest(here.corner)
         signal = side * view.steering.beyond_rad[span]
@@ -293,9 +315,29 @@ class CornerStage:
         if alarms.size == 0:
             return None
         index = int(alarms[0])
-        here.alarm_score = float(ramps.score[index])
-        here.alarm = self._turn_in(view, span.start + index, len(signal) - 1 - index)
-        return here.alarm
+        found = self._turn_in(view, span.start + index, len(signal) - 1 - index)
+        onset_s = found.time_s - found.detection_delay_s
+        if onset_s < self._seen_since + STRAIGHT_S or self._begun(here):
+            here.blind = True
+            return None
+        here.alarm, here.alarm_score = found, float(ramps.score[index])
+        return found
+
+    def _begun(self, here: Pass) -> bool:
+        """Tell whether the corner may have begun before a second of straight was seen.
+
+        So it is where the car was found beyond the straight, or its steering already rose.
+        """
+        if not here.joined:
+            return False
+        corner, watched_s = self._corners[here.corner], self._watched_since(here)
+        trace = self._traced(corner)
+        time, signal = trace[_TIME], corner.side * trace[_SIGNAL]
+        first = signal[(time >= watched_s - STRAIGHT_S) & (time < watched_s - STRAIGHT_S + SHORT_S)]
+        last = signal[(time >= watched_s - SHORT_S) & (time < watched_s)]
+        if first.size == 0 or last.size == 0 or np.interp(watched_s, time, trace[_WAY]) > 0.0:
+            return True
+        return float(last.mean() - first.mean()) > TURNED_SHARE * self._height(here.corner)
 
     def _watched_since(self, here: Pass) -> float:
         """Return from when an onset counts: in the zone, after a second of straight."""
@@ -476,6 +518,8 @@ class CornerStage:
         )
 
     def _refine(self, here: Pass, trace: FloatArray) -> tuple[Knot, float] | None:
+        if self._begun(here):
+            return None
         corner = self._corners[here.corner]
         rest = self._rest(here.corner)
         signal = corner.side * trace[_SIGNAL]
@@ -515,6 +559,8 @@ class CornerStage:
     def _why(self, here: Pass, knot: Knot | None, context: Context) -> str:
         if context == "slow":
             return "under half the usual speed"
+        if knot is None and (here.blind or here.joined):
+            return "no second of straight was seen before it"
         if knot is None:
             return "no turn-in found before the apex"
         return "joined after the entry's start" if here.joined else ""
