@@ -45,6 +45,8 @@ RAMP_TIME_S = 1.2
 GRID_M = 2.0
 LEVEL_SHARE = 0.06
 """Curvature up to this share of the corner's own still belongs to the straight."""
+BEGUN_SHARE = 0.002
+"""A straight ends where its curvature has risen by this share of the corner's own."""
 DOGLEG_REACH_M = 60.0
 """A driver rounds a dogleg off by about this much on either side."""
 DOGLEG_FACTOR = 1.6
@@ -129,6 +131,9 @@ def _guide_corner(
     begins = float(along[straight][-1]) if straight.any() else 0.0
     near = straight & (along > begins - 80.0)
     base = float(np.median(own[near])) if near.any() else floor
+    # Held from where the road begins to bend: a step there would look like steering.
+    begun = straight & (own <= base + BEGUN_SHARE * (peak - floor))
+    begins = float(along[begun][-1]) if begun.any() else begins
     taken = along >= begins
     level[order] = corner.side * base
     held[order[taken]] = corner.side * base
