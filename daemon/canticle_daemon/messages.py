@@ -54,12 +54,17 @@ class StreamLost(Event, tag="stream_lost"):
     """No datagram for `silence_s` of wall time."""
 
     silence_s: float
+    reason: Reason = "pause"
 
 
 class StreamResumed(Event, tag="stream_resumed"):
-    """Datagrams come again after `silence_s` of wall time."""
+    """Datagrams come again after `silence_s` of wall time.
+
+    `reason` is what the stream's clock did meanwhile: stood still, skipped, or went back.
+    """
 
     silence_s: float
+    reason: Reason
 
 
 class Discontinuity(Event, tag="discontinuity"):

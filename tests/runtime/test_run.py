@@ -88,6 +88,7 @@ class TestReady:
             until(lambda: types_of(session) == ["session_started"], "its start")
             assert run.end()[0] == 0
             assert types_of(session) == ["session_started", "session_ended"]
+            assert 100.0 <= events_of(session)[0]["time_s"] <= 100.0 + 9 / 60.0
             assert run.complaints == ""
 
     def test_another_car_or_track_opens_another_session(
@@ -241,8 +242,20 @@ class TestSilence:
             send(stream[60:120], live.address, 300, sender)
             resumed = live.wait_for("stream_resumed")
             assert resumed["silence_s"] > 2.0
+            assert (lost["reason"], resumed["reason"]) == ("pause", "pause")
             assert live.wait_for("discontinuity")["reason"] == "pause"
             assert types_of(live.session).count("stream_lost") == 1
+
+    @pytest.mark.parametrize(("step_s", "reason"), [(30.0, "gap"), (-30.0, "rewind")])
+    def test_a_stream_that_resumes_elsewhere_says_how(
+        self, tmp_path: Path, sender: socket.socket, step_s: float, reason: str
+    ) -> None:
+        with Live(tmp_path) as live:
+            send(frames(60), live.address, 300, sender)
+            live.wait_for("stream_lost")
+            send(frames(5, start_s=101.0 + step_s), live.address, 300, sender)
+            assert live.wait_for("stream_resumed")["reason"] == reason
+            assert live.wait_for("discontinuity")["reason"] == reason
 
     def test_a_clock_that_stands_still_is_a_pause(
         self, tmp_path: Path, sender: socket.socket

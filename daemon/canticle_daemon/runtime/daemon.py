@@ -17,6 +17,7 @@ import zmq
 
 from canticle_daemon.messages import (
     Discontinuity,
+    Reason,
     Status,
     StreamLost,
     StreamResumed,
@@ -48,7 +49,7 @@ class Daemon:
     port, bus, engine, console
         What it listens to, speaks on, thinks with and shows.
     open_session
-        Opens the next session.
+        Opens the next session, at a time of the stream's clock.
     session
         The session already open, with `--session`; then it is the only one.
     children
@@ -63,7 +64,7 @@ class Daemon:
     bus: Bus
     engine: Engine
     console: Console
-    open_session: Callable[[], Session]
+    open_session: Callable[[float], Session]
     publisher: EstimatePublisher
     session: Session | None
     children: list[Child] = field(default_factory=list)
@@ -132,7 +133,7 @@ class Daemon:
         """Publish the estimates, before the events of the same datagrams are looked for."""
         self.port.confirm()
         if self.session is None:
-            self.session = self.open_session()
+            self.session = self.open_session(result.frames[0].time_s)
         self.publisher(result)
 
     def _mind_names(self, result: Result) -> None:
@@ -158,8 +159,11 @@ class Daemon:
         self._heard = now
         if self._lost:
             self._lost = False
-            self.session.tell(StreamResumed(time_s=newest, silence_s=round(silence, 3)))
-            if 0.0 <= newest - before < PAUSE_S:
+            reason = _silence_reason(newest - before)
+            self.session.tell(
+                StreamResumed(time_s=newest, silence_s=round(silence, 3), reason=reason)
+            )
+            if reason == "pause":
                 self._tell_pause(newest, silence)
         if newest != before:
             self._moved, self._paused = now, False
@@ -275,3 +279,10 @@ class Daemon:
             f"lap {int(estimates.lap[-1])} · {frame.speed_mps:.0f} m/s · demand {asked} · "
             f"{status.frames} frames{lost} · voice {status.voice} · overlay {status.overlay}"
         )
+
+
+def _silence_reason(step_s: float) -> Reason:
+    """Return what a silence was, by the step of the stream's clock over it."""
+    if step_s < 0.0:
+        return "rewind"
+    return "pause" if step_s < PAUSE_S else "gap"

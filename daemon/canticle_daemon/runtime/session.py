@@ -30,18 +30,26 @@ class Session:
         The UDP endpoint in use, None in a replay.
     bus, console
         Where else events go.
+    time_s
+        The stream's clock, 0 before the first datagram.
     """
 
     def __init__(
-        self, folder: Path, facts: dict[str, Any], bind: str | None, bus: Bus, console: Console
+        self,
+        folder: Path,
+        facts: dict[str, Any],
+        bind: str | None,
+        bus: Bus,
+        console: Console,
+        time_s: float = 0.0,
     ) -> None:
         self.folder = folder
         self._bind, self._bus, self._console = bind, bus, console
         self._recorder = Recorder(folder, {"bind": bind, "publish": bus.endpoint, **facts})
-        self._time_s = 0.0
+        self._time_s = time_s
         self.tell(
             SessionStarted(
-                time_s=0.0,
+                time_s=time_s,
                 version=__version__,
                 bind=bind,
                 publish=bus.endpoint,

@@ -157,9 +157,9 @@ def running(
         stack.callback(lambda: close_all(children))
         engine = parts.engine()
 
-        def open_session() -> Session:
+        def open_session(time_s: float = 0.0) -> Session:
             folder = parts.session_folder(own_session)
-            session = Session(folder, parts.facts(), port.endpoint, bus, console)
+            session = Session(folder, parts.facts(), port.endpoint, bus, console, time_s)
             console.line(f"session {folder}")
             return session
 
