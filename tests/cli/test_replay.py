@@ -183,3 +183,33 @@ def test_what_is_no_recording_is_refused_before_a_session_begins(
     (line,) = (tmp_path / "stderr.txt").read_text().splitlines()
     assert line.startswith(f"canticle: {recording}: ")
     assert words in line
+
+
+@pytest.mark.parametrize("where", ["option", "config"])
+def test_who_listens_at_a_named_endpoint_hears_all_of_a_fast_replay(
+    tmp_path: Path, stream: list[bytes], where: str
+) -> None:
+    import zmq
+
+    with socket.socket() as probe:
+        probe.bind(("127.0.0.1", 0))
+        endpoint = f"tcp://127.0.0.1:{probe.getsockname()[1]}"
+    config = tmp_path / "config.toml"
+    config.write_text(f'[bus]\npublish = "{endpoint}"\n')
+    given = ("--publish", endpoint) if where == "option" else ("--config", config)
+    session = tmp_path / "session"
+    recording = recording_of(tmp_path, stream[:1500])
+    with zmq.Context() as context, context.socket(zmq.SUB) as ear:
+        ear.linger = 0
+        ear.rcvhwm = 100  # less than there will be: the replay keeps to its listener's pace
+        ear.subscribe("")
+        ear.connect(endpoint)
+        with Canticle(tmp_path, "replay", recording, "--session", session, *given) as run:
+            heard = []
+            while not heard or not heard[-1].startswith(b"session_ended"):
+                assert ear.poll(20_000), run.complaints
+                heard.append(ear.recv())
+            assert run.status() == 0
+    topics = [message.split(b" ", 1)[0] for message in heard]
+    assert topics[0] == b"session_started"
+    assert topics.count(b"estimate") == topics.count(b"frame") == 1500

@@ -27,6 +27,9 @@ BLOCK = 1024
 LONGEST_WAIT_S = 2.0
 """A longer gap in the recording's clock is not waited for."""
 READER = "recording"
+ANY_PORT = "tcp://127.0.0.1:0"
+JOIN_S = 0.5
+"""Subscribers look for a new endpoint about ten times a second."""
 
 
 def replay(
@@ -52,7 +55,8 @@ def replay(
 ) -> None:
     """Put a recorded stream through the same pipeline.
 
-    At pace max estimates are published only where --publish asks for them.
+    At pace max estimates are published only where --publish or the settings name an endpoint;
+    the replay then waits for those who listen there.
     """
     check_pace(pace)
     console = Console()
@@ -66,7 +70,7 @@ def replay(
             defaults={
                 "voice.enabled": False,
                 "overlay.enabled": False,
-                "bus.publish": "tcp://127.0.0.1:0",
+                "bus.publish": ANY_PORT,
             },
         ),
         console,
@@ -78,9 +82,12 @@ def replay(
         bus = Bus(parts.config.bus.publish)
         stack.callback(bus.close)
         publisher = EstimatePublisher(bus, parts.config.bus.estimate_hz)
+        asked = parts.config.bus.publish != ANY_PORT
+        if asked:
+            bus.wait_for_listeners(JOIN_S)
         player = _Player(
             parts, parts.engine(), stop, None if fast else float(pace),
-            publisher if not fast or publish is not None else None,
+            publisher if asked or not fast else None,
         )  # fmt: skip
         opened = Session(parts.session_folder(session), parts.facts(), None, bus, console)
         children = start_children(parts, bus.endpoint)

@@ -13,6 +13,7 @@ from canticle_daemon.messages import bus_message, encode
 from canticle_daemon.runtime.udp import owner_of
 
 QUEUED_MESSAGES = 50_000
+PATIENCE_MS = 1000
 
 
 class Bus:
@@ -37,7 +38,9 @@ class Bus:
                 f"bus.publish: {endpoint!r} is not an endpoint such as tcp://127.0.0.1:47801"
             )
         self.context = zmq.Context(io_threads=1)
-        self._socket = self.context.socket(zmq.PUB)
+        # A PUB socket that also tells of its subscribers.
+        self._socket = self.context.socket(zmq.XPUB)
+        self._flags = zmq.DONTWAIT
         # Exit must never hang on a subscriber that does not read.
         self._socket.setsockopt(zmq.LINGER, 200)
         self._socket.setsockopt(zmq.SNDHWM, QUEUED_MESSAGES)
@@ -50,7 +53,19 @@ class Bus:
 
     def publish(self, topic: str, payload: msgspec.Struct) -> None:
         """Send one message."""
-        self._socket.send(bus_message(topic, encode(payload)), zmq.DONTWAIT)
+        try:
+            self._socket.send(bus_message(topic, encode(payload)), self._flags)
+        except zmq.Again:  # a subscriber that no longer reads: from now on it loses messages
+            self._flags = zmq.DONTWAIT
+            self._socket.setsockopt(zmq.XPUB_NODROP, 0)
+
+    def wait_for_listeners(self, seconds: float) -> None:
+        """Give subscribers some time to join, and from now on to keep up: for replays alone."""
+        self._socket.poll(int(1000 * seconds))
+        self._flags = zmq.Flag(0)
+        self._socket.setsockopt(zmq.XPUB_NODROP, 1)
+        self._socket.setsockopt(zmq.SNDTIMEO, PATIENCE_MS)
+        self._socket.setsockopt(zmq.LINGER, PATIENCE_MS)
 
     def close(self) -> None:
         """Let go of the port."""
