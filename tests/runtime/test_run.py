@@ -271,6 +271,27 @@ class TestSilence:
 
 
 class TestBadInput:
+    def test_positions_that_no_origin_places_are_told_once(
+        self, tmp_path: Path, sender: socket.socket
+    ) -> None:
+        row = {
+            "speed_mps": 50.0, "yaw_rate_radps": 0.0, "accel_y_mps2": 0.0, "pos_y_m": 3.0,
+            "accel_x_mps2": 0.2, "accel_z_mps2": 9.81,
+        }  # fmt: skip
+        stream = [
+            msgspec.json.encode(row | {"time_s": n / 60.0, "pos_x_m": n * 50.0 / 60.0})
+            for n in range(150)
+        ]
+        track = track_file(tmp_path)
+        with Live(tmp_path, "--track", track) as live, Ear(live.publish, "estimate") as ear:
+            send(stream, live.address, 60, sender)
+            estimates = [estimate for _, estimate in ear.rest()]
+            assert live.end()[0] == 0
+            assert live.printed.count("the track file has no origin") == 1
+        assert len(estimates) == 150
+        assert {estimate["station_m"] for estimate in estimates} == {None}
+        assert all(estimate["demand"] > 0.0 for estimate in estimates)
+
     def test_nothing_a_stranger_sends_stops_it(self, tmp_path: Path, sender: socket.socket) -> None:
         rng = random.Random(5)
         good = frames(20)

@@ -79,6 +79,7 @@ class Daemon:
     _paused: bool = False
     _bad_told: int = 0
     _foreign_told: int = 0
+    _unplaced_told: bool = False
     _newest: Result | None = None
     _children_told: set[str] = field(default_factory=set)
     _names: tuple[str | None, str | None] = (None, None)
@@ -216,6 +217,19 @@ class Daemon:
             who = "a second sender" if only is None else "a sender"
             self.console.line(f"{who}, {self.port.newest_foreign}, is ignored {why}")
         self._foreign_told = status.foreign
+        self._tell_unplaced()
+
+    def _tell_unplaced(self) -> None:
+        """Say once that the map cannot be used, where neither stream nor track file places us."""
+        newest = self._newest
+        if self._unplaced_told or self.track_view is None or newest is None:
+            return
+        if newest.estimates is not None and math.isnan(float(newest.estimates.station_m[-1])):
+            self._unplaced_told = True
+            self.console.line(
+                "the stream has positions but no station_m, and the track file has no origin: "
+                "the car cannot be placed on the lap, so no lap or turn-in is told"
+            )
 
     def _tell_children(self) -> None:
         """Say once of each process that it cannot work, until it works again."""
