@@ -95,7 +95,7 @@ class Lane:
 LANES = (
     Lane("low", -1.8, 2.9, 2.0),
     Lane("middle", -3.7, -1.2, 8.0),
-    Lane("high", -5.5, -5.3, 14.0),
+    Lane("high", -5.1, -5.1, 14.0),
 )
 
 
