@@ -211,6 +211,28 @@ def test_the_knot_lies_within_two_standard_errors(drift: bool, correlation: floa
     assert within >= 450
 
 
+@pytest.mark.parametrize("rate", [60, 250, 1000])
+def test_disturbances_that_last_are_owned_up_to_at_any_rate(rate: int) -> None:
+    """A hand that wanders for 0.15 s at a time, sampled ever more finely, tells no more.
+
+    Drawn as a running mean of white noise. The correlation of neighbors would claim several
+    times too little at 1000 Hz.
+    """
+    within, claimed, missed = [], [], []
+    for seed in range(200):
+        rng = np.random.default_rng(seed)
+        x = np.arange(int(1.4 * rate)) / rate
+        width = int(0.15 * rate)
+        noise = np.convolve(rng.normal(0.0, 1.0, x.size + width - 1), np.ones(width), "valid")
+        y = np.maximum(0.0, x - 0.8) + 0.02 * noise / np.sqrt(width)
+        hinge = hinge_fit(x, y, memory=2 * width)
+        within.append(abs(hinge.knot - 0.8) <= 2.0 * hinge.std_knot)
+        claimed.append(hinge.std_knot)
+        missed.append(hinge.knot - 0.8)
+    assert 0.88 <= np.mean(within) <= 0.99
+    assert 0.5 < float(np.median(claimed)) / float(np.std(missed)) < 1.5
+
+
 def test_hinge_of_one_sign_only() -> None:
     x, y = ramp_series()
     assert hinge_fit(x, y, sign=1).knot == pytest.approx(120.04, abs=0.01)

@@ -15,7 +15,7 @@ from __future__ import annotations
 import math
 from collections import deque
 from collections.abc import Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from enum import IntEnum
 from itertools import pairwise
 
@@ -57,6 +57,7 @@ SETTLE_S = 1.0
 SLOPE_SHARE = 0.85
 """The detector's slope over the driver's median: a slower hand is then still seen in time."""
 SLOW_SHARE = 0.5
+LEAST_LIVE_STD_M = 0.3
 BACK_M = 50.0
 """A car this little behind a gate it has passed stays past it: places tremble, cars roll back."""
 TURNED_SHARE = 0.3
@@ -356,7 +357,8 @@ class CornerStage:
         knot = live_knot(window[_TIME], corner.side * window[_SIGNAL], slope, spread * slope)
         speed = float(view.block.speed_mps[frame])
         way = float(np.interp(knot.x, window[_TIME], window[_WAY]))
-        std = max(knot.std * speed, _rms(habits.misses_m), 0.3)
+        std_s = math.hypot(knot.std, self._coarse_rad / slope)
+        std = max(std_s * speed, _rms(habits.misses_m), LEAST_LIVE_STD_M)
         station = (corner.transition_start_m + way) % self._track.length_m
         margin = self._track.difference_m(corner.target_m, station)
         return TurnIn(
@@ -533,8 +535,11 @@ class CornerStage:
         )
         if found is None:
             return None
-        onset_s = float(np.interp(found[0].x, trace[_WAY], trace[_TIME]))
-        return found if onset_s >= self._seen_since + STRAIGHT_S else None
+        knot, height = found
+        if float(np.interp(knot.x, trace[_WAY], trace[_TIME])) < self._seen_since + STRAIGHT_S:
+            return None
+        std = math.hypot(knot.std, self._coarse_rad / knot.slope)
+        return replace(knot, std=std), height
 
     def _where(self, corner: CornerPlan, knot: Knot | None, trace: FloatArray) -> _Onset:
         """Return the fields of an entry that hang on its turn-in."""
@@ -602,7 +607,9 @@ class CornerStage:
         slopes = [k if math.isfinite(k) else g for k, g in zip(known, guesses, strict=True)]
         self._slope = SLOPE_SHARE * min(slopes)
         self._rests = np.array([self._rest(corner) for corner in range(len(self._corners))])
-        self._threshold = self._calibration.threshold(self._slope, self._quantum())
+        step = self._quantum()
+        self._threshold = self._calibration.threshold(self._slope, step)
+        self._coarse_rad = step / math.sqrt(12.0)
 
     def _quantum(self) -> float:
         step = self._steering.quantum_rad

@@ -55,6 +55,10 @@ RAMP_FADES = 0.35
 LASTING_S = 0.2
 RAMP_SHARE = 0.7
 """The knot is fitted up to this share of the ramp's height, short of its rounded top."""
+MEMORY_S = 0.3
+"""How long a correction, or a ramp that is no straight line, moves the steering one way."""
+LEAST_STD_M = 0.1
+"""A hand begins to turn within some milliseconds; no station is meant more finely."""
 LEAST_FRAMES = 10
 FLOOR_RAMP_S = 0.04
 PRIOR_EXCURSION_RAD = math.radians(3.3)
@@ -464,10 +468,12 @@ def refined_knot(
     low = np.flatnonzero(smooth[:top] - level < 0.1 * risen)
     foot = int(low[-1]) if low.size else begin
     first, last = max(foot - span, 0), max(top, foot + 3) + 1
-    hinge: Hinge = hinge_fit(way_m[first:last], signal[first:last], sign=1)
+    memory = round(MEMORY_S / dt)
+    hinge: Hinge = hinge_fit(way_m[first:last], signal[first:last], sign=1, memory=memory)
     if not math.isfinite(hinge.knot):
         return None
-    return Knot(hinge.knot, hinge.std_knot, hinge.level, hinge.slope), risen
+    std = math.hypot(hinge.std_knot, LEAST_STD_M)
+    return Knot(hinge.knot, std, hinge.level, hinge.slope), risen
 
 
 def _at(time_s: FloatArray, moment: float) -> int:
