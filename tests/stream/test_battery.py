@@ -18,7 +18,7 @@ from canticle_daemon.stream.filters import Derivative, FirstOrderLag, Hold, Runn
 from canticle_daemon.stream.locate import Locate
 from canticle_daemon.stream.pipeline import Pipeline
 from canticle_daemon.stream.spend import SpendStage
-from canticle_daemon.stream.turn_in import SteeringStage
+from canticle_daemon.stream.steering import SteeringStage
 from canticle_daemon.testing import check_stage
 from canticle_daemon.track.profile import Track
 

@@ -11,7 +11,9 @@ from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 from streams import oval_file
 
-from canticle_daemon.stream.turn_in import Calibration, Guide, Knot, live_knot, refined_knot
+from canticle_daemon.stream.knots import Knot, live_knot, refined_knot
+from canticle_daemon.stream.steering import Guide
+from canticle_daemon.stream.turn_in import Calibration
 from canticle_daemon.track.profile import Track
 
 SLOPE = math.radians(15.0)

@@ -27,23 +27,18 @@ from canticle_daemon.physics.car import CarFile
 from canticle_daemon.physics.road import GRAVITY_MPS2
 from canticle_daemon.stream.bank import Bank
 from canticle_daemon.stream.demand import Demand
+from canticle_daemon.stream.knots import Knot, live_knot, refined_knot
 from canticle_daemon.stream.locate import Located
 from canticle_daemon.stream.spend import Spend
+from canticle_daemon.stream.steering import Steering, SteeringStage, corner_curvature
 from canticle_daemon.stream.turn_in import (
     LAGS_S,
     LEVEL_S,
-    RAMP_TIME_S,
     SHORT_S,
     WINDOW_S,
     Calibration,
-    Knot,
     Ramps,
     RampStage,
-    Steering,
-    SteeringStage,
-    corner_curvature,
-    live_knot,
-    refined_knot,
 )
 from canticle_daemon.track.profile import CornerPlan, Track
 
@@ -58,6 +53,8 @@ SLOPE_SHARE = 0.85
 """The detector's slope over the driver's median: a slower hand is then still seen in time."""
 SLOW_SHARE = 0.5
 LEAST_LIVE_STD_M = 0.3
+RAMP_TIME_S = 1.2
+"""A driver's steering ramp before one was learned (common practice, no source)."""
 BACK_M = 50.0
 """A car this little behind a gate it has passed stays past it: places tremble, cars roll back."""
 TURNED_SHARE = 0.3

@@ -1,0 +1,198 @@
+"""Knots: when and where a turn-in began.
+
+The onset is the knot of a continuous hinge, level then ramp: live with the driver's usual slope
+as a prior (`live_knot`), at the apex by least squares over the whole neighborhood
+(`refined_knot`).
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from canticle_daemon.frame import FloatArray
+from canticle_daemon.stream.onset import hinge_fit
+from canticle_daemon.stream.turn_in import LAGS_S, LEVEL_S
+
+RAMP_FADES = 0.35
+"""The first ramp ends where its slope has fallen to this share of its steepest."""
+LASTING_S = 0.2
+RAMP_SHARE = 0.7
+"""The knot is fitted up to this share of the ramp's height, short of its rounded top."""
+MEMORY_S = 0.3
+"""How long a correction, or a ramp that is no straight line, moves the steering one way."""
+LEAST_STD_M = 0.1
+"""A hand begins to turn within some milliseconds; no station is meant more finely."""
+LEAST_FRAMES = 10
+
+
+@dataclass(frozen=True, slots=True)
+class Knot:
+    """An onset: its place along `x` with standard error, the level before, the slope after."""
+
+    x: float
+    std: float
+    level: float
+    slope: float
+
+
+def live_knot(time_s: FloatArray, signal: FloatArray, slope: float, slope_std: float) -> Knot:
+    """Estimate the onset at the moment of the alarm, with the usual slope as a prior.
+
+    Parameters
+    ----------
+    time_s, signal
+        The last second and a half, in the corner's sense; the ramp is at the end.
+    slope, slope_std
+        The driver's usual slope and its spread, per second.
+
+    Returns
+    -------
+    Knot
+        The mean of the posterior over onsets of the last 0.8 s and its standard deviation;
+        the noise is that of the signal before, inflated for corrections that last.
+    """
+    now = float(time_s[-1])
+    candidates = np.linspace(now - LAGS_S[-1], now, 161)[:-2]
+    before = time_s < candidates[:, None]
+    level_mask = before & (time_s >= candidates[:, None] - LEVEL_S)
+    weight = np.maximum(level_mask.sum(axis=1), 1)
+    level = np.where(level_mask, signal, 0.0).sum(axis=1) / weight
+    noise2 = _noise_power(time_s, signal, slope)
+    tau = np.maximum(time_s - candidates[:, None], 0.0)
+    away = np.where(level_mask | ~before, signal - level[:, None], 0.0)
+    prior = noise2 / slope_std**2
+    fitted = ((tau * away).sum(axis=1) + prior * slope) / ((tau**2).sum(axis=1) + prior)
+    misfit = ((away - fitted[:, None] * tau) ** 2).sum(axis=1)
+    dt = (now - float(time_s[0])) / max(time_s.size - 1, 1)
+    misfit = misfit / noise2 + ((fitted - slope) / slope_std) ** 2
+    # Corrections last about a quarter of a second, so neighboring samples say the same again.
+    share = min(1.0, 4.0 * dt / 0.12)
+    chance = np.exp(-0.5 * share * (misfit - misfit.min()))
+    chance /= chance.sum()
+    mean = float((chance * candidates).sum())
+    std = math.sqrt(float((chance * (candidates - mean) ** 2).sum()) + (0.3 * dt) ** 2)
+    best = int(np.argmin(np.abs(candidates - mean)))
+    return Knot(mean, std, float(level[best]), float(fitted[best]))
+
+
+def _noise_power(time_s: FloatArray, signal: FloatArray, slope: float) -> float:
+    """Return the variance of the signal before the ramp: noise and corrections, never nothing."""
+    rough = np.diff(signal[: max(signal.size // 2, 3)])
+    least2: float = (0.02 * slope * LAGS_S[0]) ** 2
+    noise2 = max(0.5 * float(np.mean(rough**2)), least2)
+    calm = signal[time_s < float(time_s[-1]) - 0.5]
+    return max(noise2, float(np.var(calm))) if calm.size > 3 else noise2
+
+
+def refined_knot(
+    time_s: FloatArray,
+    way_m: FloatArray,
+    signal: FloatArray,
+    rest: float,
+    height: float,
+    live_s: float | None,
+) -> tuple[Knot, float] | None:
+    """Estimate the onset from the whole entry.
+
+    The ramp that begins the corner is often only the first of several: the banking turns the
+    car too, and the wheel may ease back while it rises. So the fit ends where the first ramp
+    does, and it stays with the onset that was seen live.
+
+    Parameters
+    ----------
+    time_s, way_m, signal
+        From before the zone to the apex, in the corner's sense; `way_m` rises.
+    rest
+        The level held before, as well as it is known.
+    height
+        The usual height of the first ramp; less than a third of it is no turn-in.
+    live_s
+        The time of the onset seen live, None where there was no alarm.
+
+    Returns
+    -------
+    (Knot, float) or None
+        The knot along the way (slope per meter), and the height of the ramp; None where
+        nothing like a turn-in is found.
+    """
+    if time_s.size < LEAST_FRAMES:
+        return None
+    dt = (float(time_s[-1]) - float(time_s[0])) / (time_s.size - 1)
+    smooth = _centered_mean(signal, max(round(0.05 / dt), 1))
+    begin = _first_rise(smooth - rest, height, dt) if live_s is None else _at(time_s, live_s)
+    window = None if begin is None else _ramp_window(smooth, begin, height, dt)
+    if window is None:
+        return None
+    first, last, risen = window
+    memory = round(MEMORY_S / dt)
+    hinge = hinge_fit(way_m[first:last], signal[first:last], sign=1, memory=memory)
+    if not math.isfinite(hinge.knot):
+        return None
+    std = math.hypot(hinge.std_knot, LEAST_STD_M)
+    return Knot(hinge.knot, std, hinge.level, hinge.slope), risen
+
+
+def _ramp_window(
+    smooth: FloatArray, begin: int, height: float, dt: float
+) -> tuple[int, int, float] | None:
+    """Return the samples to fit, level and first ramp but not its top, and the ramp's height."""
+    span = max(round(LEVEL_S / dt), 4)
+    level = float(np.median(smooth[max(begin - span, 0) : begin + 1]))
+    end = _ramp_end(smooth, begin, dt)
+    risen = float(smooth[end]) - level
+    if risen < height / 3.0:
+        return None
+    climb = smooth[begin : end + 1] - level
+    top = begin + int(np.argmax(climb >= RAMP_SHARE * risen))
+    low = np.flatnonzero(smooth[:top] - level < 0.1 * risen)
+    foot = int(low[-1]) if low.size else begin
+    return max(foot - span, 0), max(top, foot + 3) + 1, risen
+
+
+def _at(time_s: FloatArray, moment: float) -> int:
+    return min(max(int(np.searchsorted(time_s, moment)), 1), time_s.size - 2)
+
+
+def _first_rise(above: FloatArray, height: float, dt: float) -> int | None:
+    """Return where the signal last was low before it first rose by half the usual and stayed."""
+    ahead = _mean_ahead(above, max(round(0.2 / dt), 2))
+    risen = np.flatnonzero((above > 0.5 * height) & (ahead > 0.35 * height))
+    if risen.size == 0:
+        return None
+    low = np.flatnonzero(above[: int(risen[0])] < 0.05 * height)
+    return int(low[-1]) if low.size else 0
+
+
+def _ramp_end(smooth: FloatArray, begin: int, dt: float) -> int:
+    """Return the sample at which the ramp from `begin` has lost most of its slope."""
+    reach = max(round(0.1 / dt), 1)
+    rate = (smooth[2 * reach :] - smooth[: -2 * reach]) / (2 * reach * dt)
+    rate = np.concatenate([np.repeat(rate[:1], reach), rate, np.repeat(rate[-1:], reach)])
+    ahead = rate[begin:]
+    highest = np.maximum.accumulate(np.maximum(ahead, 0.0))
+    # A correction against the ramp slows it for a moment; an end lasts.
+    lasting = max(round(LASTING_S / dt), 1)
+    padded = np.concatenate([ahead, np.repeat(ahead[-1:], lasting)])
+    strongest = np.lib.stride_tricks.sliding_window_view(padded, lasting + 1).max(axis=1)
+    spent = strongest < RAMP_FADES * highest
+    spent[: max(round(0.12 / dt), 2)] = False
+    found = np.flatnonzero(spent)
+    return begin + (int(found[0]) if found.size else ahead.size - 1)
+
+
+def _centered_mean(values: FloatArray, half: int) -> FloatArray:
+    padded = np.concatenate([np.repeat(values[:1], half), values, np.repeat(values[-1:], half)])
+    sums = np.concatenate([[0.0], np.cumsum(padded)])
+    width = 2 * half + 1
+    mean: FloatArray = (sums[width:] - sums[:-width]) / width
+    return mean
+
+
+def _mean_ahead(values: FloatArray, count: int) -> FloatArray:
+    padded = np.concatenate([values, np.repeat(values[-1:], count)])
+    sums = np.concatenate([[0.0], np.cumsum(padded)])
+    mean: FloatArray = (sums[count:-1] - sums[: -count - 1])[: values.size] / count
+    return mean
