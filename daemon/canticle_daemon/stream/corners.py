@@ -27,12 +27,11 @@ from canticle_daemon.physics.car import CarFile
 from canticle_daemon.physics.road import GRAVITY_MPS2
 from canticle_daemon.stream.bank import Bank
 from canticle_daemon.stream.demand import Demand
-from canticle_daemon.stream.knots import Knot, live_knot, refined_knot
+from canticle_daemon.stream.knots import LONG_REACH_S, Knot, live_knot, refined_knot
 from canticle_daemon.stream.locate import Located
 from canticle_daemon.stream.spend import Spend
 from canticle_daemon.stream.steering import Steering, SteeringStage, corner_curvature
 from canticle_daemon.stream.turn_in import (
-    LAGS_S,
     LEVEL_S,
     SHORT_S,
     WINDOW_S,
@@ -122,6 +121,7 @@ class Pass:
     entry: Snapshot | None = None
     alarm: TurnIn | None = None
     alarm_score: float = math.nan
+    alarm_way_m: float = math.nan
     joined: bool = False
     blind: bool = False
     """Whether it began before a second of straight was seen."""
@@ -348,14 +348,18 @@ class CornerStage:
         trace = self._traced(corner)
         trace = trace[:, : trace.shape[1] - unseen]
         now = float(trace[_TIME, -1])
-        window = trace[:, trace[_TIME] >= now - LAGS_S[-1] - LEVEL_S]
+        window = trace[:, trace[_TIME] >= now - LONG_REACH_S - LEVEL_S]
         slope = _median(habits.slopes, self._slope / SLOPE_SHARE)
-        spread = 0.5 if len(habits.slopes) < 3 else 0.25
+        spread = (1.0, 0.5, 0.5, 0.25)[min(len(habits.slopes), 3)]
         knot = live_knot(window[_TIME], corner.side * window[_SIGNAL], slope, spread * slope)
         speed = float(view.block.speed_mps[frame])
-        way = float(np.interp(knot.x, window[_TIME], window[_WAY]))
+        here.alarm_way_m = float(np.interp(knot.x, window[_TIME], window[_WAY]))
+        bias = _median(habits.misses_m, 0.0) if len(habits.misses_m) >= 3 else 0.0
+        way = here.alarm_way_m - bias
+        onset_s = knot.x - bias / max(speed, 1.0)
         std_s = math.hypot(knot.std, self._coarse_rad / slope)
-        std = max(std_s * speed, _rms(habits.misses_m), LEAST_LIVE_STD_M)
+        scatter = _rms(deque(miss - bias for miss in habits.misses_m))
+        std = max(std_s * speed, scatter, LEAST_LIVE_STD_M)
         station = (corner.transition_start_m + way) % self._track.length_m
         margin = self._track.difference_m(corner.target_m, station)
         return TurnIn(
@@ -373,7 +377,7 @@ class CornerStage:
             verdict=self._marks.verdict(margin, station, corner, self._track),
             target_source=corner.target_source,
             context=_flagged(view.block.frames[frame]) or "free",
-            detection_delay_s=now - knot.x,
+            detection_delay_s=now - onset_s,
         )
 
     def _calibrate(self, view: _View, ramps: Ramps, span: slice, part: Part) -> None:
@@ -636,7 +640,7 @@ class CornerStage:
         habits.heights.append(height)
         habits.slopes.append(knot.slope * speed)
         if here.alarm is not None:
-            miss = -here.alarm.transition_margin_m - knot.x
+            miss = here.alarm_way_m - knot.x
             if here.alarm.time_s < onset_s - 0.3:
                 self._calibration.add(here.alarm_score)
             else:

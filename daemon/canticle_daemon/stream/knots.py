@@ -12,15 +12,20 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from canticle_daemon.frame import FloatArray
-from canticle_daemon.stream.onset import hinge_fit
+from canticle_daemon.frame import BoolArray, FloatArray
+from canticle_daemon.stream.onset import Hinge, hinge_fit
 from canticle_daemon.stream.turn_in import LAGS_S, LEVEL_S
 
 RAMP_FADES = 0.35
 """The first ramp ends where its slope has fallen to this share of its steepest."""
 LASTING_S = 0.2
-RAMP_SHARE = 0.7
-"""The knot is fitted up to this share of the ramp's height, short of its rounded top."""
+RAMP_SHARES = (0.7, 0.5, 0.35)
+"""The knot is fitted up to such a share of the ramp's height, short of its rounded top."""
+BEND_SHOWS = 1.5
+"""Residuals of so many times the straight's own noise mean that the ramp bends."""
+FEWEST_S = 0.15
+"""Less of a ramp than this says too little."""
+LONG_REACH_S = 2.0 * LAGS_S[-1]
 MEMORY_S = 0.3
 """How long a correction, or a ramp that is no straight line, moves the steering one way."""
 LEAST_STD_M = 0.1
@@ -44,23 +49,37 @@ def live_knot(time_s: FloatArray, signal: FloatArray, slope: float, slope_std: f
     Parameters
     ----------
     time_s, signal
-        The last second and a half, in the corner's sense; the ramp is at the end.
+        The last `LONG_REACH_S` and `LEVEL_S`, in the corner's sense; the ramp is at the end.
     slope, slope_std
         The driver's usual slope and its spread, per second.
 
     Returns
     -------
     Knot
-        The mean of the posterior over onsets of the last 0.8 s and its standard deviation;
-        the noise is that of the signal before, inflated for corrections that last.
+        The mean of the posterior over onsets of the last 0.8 s, or of twice that for a ramp so
+        slow that it began before, and its standard deviation; the noise is that of the signal
+        before, inflated for corrections that last.
     """
     now = float(time_s[-1])
-    candidates = np.linspace(now - LAGS_S[-1], now, 161)[:-2]
+    knot = _likely_knot(time_s, signal, slope, slope_std, LAGS_S[-1])
+    if knot.x < now - 0.85 * LAGS_S[-1]:
+        knot = _likely_knot(time_s, signal, slope, slope_std, LONG_REACH_S)
+    return knot
+
+
+def _likely_knot(
+    time_s: FloatArray, signal: FloatArray, slope: float, slope_std: float, reach_s: float
+) -> Knot:
+    """Weigh the onsets of the last `reach_s` by how well level and ramp fit the signal."""
+    now = float(time_s[-1])
+    seen = time_s >= now - reach_s - LEVEL_S
+    time_s, signal = time_s[seen], signal[seen]
+    candidates = np.linspace(now - reach_s, now, 161)[:-2]
     before = time_s < candidates[:, None]
     level_mask = before & (time_s >= candidates[:, None] - LEVEL_S)
     weight = np.maximum(level_mask.sum(axis=1), 1)
     level = np.where(level_mask, signal, 0.0).sum(axis=1) / weight
-    noise2 = _noise_power(time_s, signal, slope)
+    noise2 = _noise_power(signal, slope, time_s < candidates[0])
     tau = np.maximum(time_s - candidates[:, None], 0.0)
     away = np.where(level_mask | ~before, signal - level[:, None], 0.0)
     prior = noise2 / slope_std**2
@@ -78,12 +97,12 @@ def live_knot(time_s: FloatArray, signal: FloatArray, slope: float, slope_std: f
     return Knot(mean, std, float(level[best]), float(fitted[best]))
 
 
-def _noise_power(time_s: FloatArray, signal: FloatArray, slope: float) -> float:
+def _noise_power(signal: FloatArray, slope: float, before: BoolArray) -> float:
     """Return the variance of the signal before the ramp: noise and corrections, never nothing."""
     rough = np.diff(signal[: max(signal.size // 2, 3)])
     least2: float = (0.02 * slope * LAGS_S[0]) ** 2
     noise2 = max(0.5 * float(np.mean(rough**2)), least2)
-    calm = signal[time_s < float(time_s[-1]) - 0.5]
+    calm = signal[before]
     return max(noise2, float(np.var(calm))) if calm.size > 3 else noise2
 
 
@@ -126,19 +145,37 @@ def refined_knot(
     window = None if begin is None else _ramp_window(smooth, begin, height, dt)
     if window is None:
         return None
-    first, last, risen = window
-    memory = round(MEMORY_S / dt)
-    hinge = hinge_fit(way_m[first:last], signal[first:last], sign=1, memory=memory)
+    hinge = _straightest_fit(way_m, signal, window, dt)
     if not math.isfinite(hinge.knot):
         return None
     std = math.hypot(hinge.std_knot, LEAST_STD_M)
-    return Knot(hinge.knot, std, hinge.level, hinge.slope), risen
+    return Knot(hinge.knot, std, hinge.level, hinge.slope), window.height
 
 
-def _ramp_window(
-    smooth: FloatArray, begin: int, height: float, dt: float
-) -> tuple[int, int, float] | None:
-    """Return the samples to fit, level and first ramp but not its top, and the ramp's height."""
+def _straightest_fit(way_m: FloatArray, signal: FloatArray, window: _Window, dt: float) -> Hinge:
+    """Fit the hinge; a ramp that bends is straight near its foot, so fit less of it then."""
+    memory = round(MEMORY_S / dt)
+    quiet = float(np.std(signal[window.first : max(window.foot, window.first + 3)]))
+    for top in window.tops:
+        span = slice(window.first, max(top, window.foot + 3) + 1)
+        hinge = hinge_fit(way_m[span], signal[span], sign=1, memory=memory)
+        if hinge.residual_std <= BEND_SHOWS * quiet or top - window.foot < FEWEST_S / dt:
+            break
+    return hinge
+
+
+@dataclass(frozen=True, slots=True)
+class _Window:
+    """Samples of level and first ramp: from `first`, ramp from `foot` to one of `tops`."""
+
+    first: int
+    foot: int
+    tops: tuple[int, ...]
+    height: float
+
+
+def _ramp_window(smooth: FloatArray, begin: int, height: float, dt: float) -> _Window | None:
+    """Return the samples to fit, level and first ramp but not its top; None without a ramp."""
     span = max(round(LEVEL_S / dt), 4)
     level = float(np.median(smooth[max(begin - span, 0) : begin + 1]))
     end = _ramp_end(smooth, begin, dt)
@@ -146,10 +183,10 @@ def _ramp_window(
     if risen < height / 3.0:
         return None
     climb = smooth[begin : end + 1] - level
-    top = begin + int(np.argmax(climb >= RAMP_SHARE * risen))
-    low = np.flatnonzero(smooth[:top] - level < 0.1 * risen)
+    tops = tuple(begin + int(np.argmax(climb >= share * risen)) for share in RAMP_SHARES)
+    low = np.flatnonzero(smooth[: tops[-1]] - level < 0.1 * risen)
     foot = int(low[-1]) if low.size else begin
-    return max(foot - span, 0), max(top, foot + 3) + 1, risen
+    return _Window(max(foot - span, 0), foot, tops, risen)
 
 
 def _at(time_s: FloatArray, moment: float) -> int:
