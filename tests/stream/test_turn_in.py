@@ -313,9 +313,12 @@ def test_marks_of_file_and_coach() -> None:
     told = run(track.with_targets({"South": 1295.0}, "targets"), frames)
     south = [e for e in told if isinstance(e, Entry) and e.corner == "South"]
     assert {e.target_source for e in south} == {"coach"}
-    for entry in south:  # the coach's mark takes the file's window with it
-        wanted = "late" if entry.margin_m < -5.0 else "early" if entry.margin_m > 30.0 else "on"
-        assert entry.verdict == wanted
+    for entry in south:  # the file's window still judges; the margin is to the coach's mark
+        station = entry.turn_in_station_m
+        assert entry.margin_m == pytest.approx(1295.0 - station, abs=1e-6)
+        assert entry.verdict == next(
+            e.verdict for e in entries if (e.lap, e.corner) == (entry.lap, "South")
+        )
 
 
 def test_lap_and_corner_are_those_of_the_transition() -> None:

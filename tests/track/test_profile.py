@@ -140,10 +140,11 @@ def test_the_view_for_displays(tmp_path: Path) -> None:
 # --- a coach's marks ---------------------------------------------------------------------------
 
 
-def test_targets_take_the_place_of_mark_and_window(tmp_path: Path) -> None:
+def test_targets_take_the_place_of_the_mark_and_leave_the_window(tmp_path: Path) -> None:
     track = load(tmp_path, contract_text(corner="target_m = 190.0\nwindow_m = [160.0, 195.0]\n"))
     (marked,) = track.with_targets({"Turn 1": 175.0}, "targets.toml").corners
-    assert (marked.target_m, marked.target_source, marked.window_m) == (175.0, "coach", None)
+    assert (marked.target_m, marked.target_source) == (175.0, "coach")
+    assert marked.window_m == (160.0, 195.0)
     assert track.corners[0].target_m == 190.0
 
 

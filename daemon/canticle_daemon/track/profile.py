@@ -222,7 +222,7 @@ class Track:
                 raise ConfigError(f"{where}: {name}: {station:g} is not on the lap")
         marked = Track(self.file)
         marked.corners = tuple(
-            replace(corner, target_m=targets[corner.name], target_source="coach", window_m=None)
+            replace(corner, target_m=targets[corner.name], target_source="coach")
             if corner.name in targets
             else corner
             for corner in self.corners
