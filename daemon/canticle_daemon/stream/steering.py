@@ -128,8 +128,7 @@ class SteeringStage:
         self._gain = car.steering_ratio * car.wheelbase_m
         self._hold = Hold(0.0)
         self._last_rad = math.nan
-        self.quantum_rad = math.inf
-        """Smallest step of the steering seen: its resolution, where it is coarse."""
+        self._step_rad = math.inf
 
     def reset(self) -> None:
         """Forget the past; the resolution stays."""
@@ -152,10 +151,15 @@ class SteeringStage:
         beyond = self._hold.process(wheel - gain * held)
         return Steering(beyond, gain * (held - level), DOGLEG_FACTOR * gain * dogleg)
 
+    @property
+    def resolution_rad(self) -> float:
+        """The smallest step of the steering seen; 0 before one was."""
+        return self._step_rad if math.isfinite(self._step_rad) else 0.0
+
     def learn(self, wheel_rad: FloatArray) -> None:
         """Look for the steering's resolution in frames that have been judged."""
         before = np.concatenate([[self._last_rad], wheel_rad[:-1]])
         steps = np.abs(wheel_rad - before)
         steps = np.where(steps > 1e-9, steps, np.inf)
-        self.quantum_rad = float(np.minimum.reduce(steps, initial=self.quantum_rad))
+        self._step_rad = float(np.minimum.reduce(steps, initial=self._step_rad))
         self._last_rad = float(wheel_rad[-1])
