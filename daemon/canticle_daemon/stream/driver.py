@@ -30,6 +30,7 @@ SETTLE_S = 1.0
 """After a corner's exit the steering still unwinds for about so long."""
 FALSE_S = 0.3
 """An alarm sooner than this before its onset was a false one."""
+FEWEST_MISSES = 3
 LEAST_SPEED_MPS = 10.0
 
 
@@ -110,11 +111,19 @@ class Driver:
         return slope, (1.0, 0.5, 0.5, 0.25)[min(len(slopes), 3)] * slope
 
     def live_error_m(self, corner: int) -> tuple[float, float]:
-        """Return by how much live onsets lie beyond the refined ones here: bias and scatter."""
-        misses = self._habits[corner].misses_m
-        bias = float(np.median(misses)) if len(misses) >= 3 else 0.0
-        squares = [(miss - bias) ** 2 for miss in misses]
-        return bias, math.sqrt(sum(squares) / len(squares)) if squares else 0.0
+        """Return by how much live onsets lie beyond the refined ones here: bias and scatter.
+
+        The bias counts only as far as it stands out from twice its own standard error (after
+        James and Stein): a busy hand's few misses say nothing of what the next will be.
+        """
+        misses = np.array(self._habits[corner].misses_m)
+        if misses.size < FEWEST_MISSES:
+            return 0.0, math.sqrt(float(np.mean(misses**2))) if misses.size else 0.0
+        middle = float(np.median(misses))
+        variance = float(np.mean((misses - middle) ** 2))
+        doubt = 0.5 * math.pi * variance / misses.size  # of a median, normal law
+        bias = middle * max(0.0, 1.0 - 4.0 * doubt / middle**2) if middle else 0.0
+        return bias, math.sqrt(variance + (middle - bias) ** 2 + doubt)
 
     def watch(
         self, time_s: FloatArray, score: FloatArray, level_rad: FloatArray, corner: int
