@@ -30,6 +30,8 @@ MEMORY_S = 0.3
 """How long a correction, or a ramp that is no straight line, moves the steering one way."""
 LEAST_STD_M = 0.1
 """A hand begins to turn within some milliseconds; no station is meant more finely."""
+WANDER_S = 0.09
+"""How long a disturbance lasts that is not noise, as its correlation adds up."""
 LEAST_FRAMES = 10
 
 
@@ -79,7 +81,7 @@ def _likely_knot(
     level_mask = before & (time_s >= candidates[:, None] - LEVEL_S)
     weight = np.maximum(level_mask.sum(axis=1), 1)
     level = np.where(level_mask, signal, 0.0).sum(axis=1) / weight
-    noise2 = _noise_power(signal, slope, time_s < candidates[0])
+    noise2, lasting2 = _noise_power(signal, slope, time_s < candidates[0])
     tau = np.maximum(time_s - candidates[:, None], 0.0)
     away = np.where(level_mask | ~before, signal - level[:, None], 0.0)
     prior = noise2 / slope_std**2
@@ -92,18 +94,25 @@ def _likely_knot(
     chance = np.exp(-0.5 * share * (misfit - misfit.min()))
     chance /= chance.sum()
     mean = float((chance * candidates).sum())
-    std = math.sqrt(float((chance * (candidates - mean) ** 2).sum()) + (0.3 * dt) ** 2)
+    # What the weights leave out: how often each sample's error is repeated by its neighbors.
+    repeated = share * (1.0 + lasting2 / noise2 * max(WANDER_S / dt - 1.0, 0.0))
+    spread2 = repeated * float((chance * (candidates - mean) ** 2).sum())
+    std = math.sqrt(spread2 + (0.3 * dt) ** 2)
     best = int(np.argmin(np.abs(candidates - mean)))
     return Knot(mean, std, float(level[best]), float(fitted[best]))
 
 
-def _noise_power(signal: FloatArray, slope: float, before: BoolArray) -> float:
-    """Return the variance of the signal before the ramp: noise and corrections, never nothing."""
+def _noise_power(signal: FloatArray, slope: float, before: BoolArray) -> tuple[float, float]:
+    """Return the signal's variance before the ramp, never nothing, and what of it lasts.
+
+    What changes from sample to sample is noise; the rest are corrections.
+    """
     rough = np.diff(signal[: max(signal.size // 2, 3)])
     least2: float = (0.02 * slope * LAGS_S[0]) ** 2
     noise2 = max(0.5 * float(np.mean(rough**2)), least2)
     calm = signal[before]
-    return max(noise2, float(np.var(calm))) if calm.size > 3 else noise2
+    whole2 = max(noise2, float(np.var(calm))) if calm.size > 3 else noise2
+    return whole2, whole2 - noise2
 
 
 def refined_knot(
