@@ -136,7 +136,8 @@ def refined_knot(
     rest
         The level held before, as well as it is known.
     height
-        The usual height of the first ramp; less than a third of it is no turn-in.
+        The usual height of the first ramp; less than a third of it is no turn-in, or less than
+        a sixth where one was seen live.
     live_s
         The time of the onset seen live, None where there was no alarm.
 
@@ -151,7 +152,8 @@ def refined_knot(
     dt = (float(time_s[-1]) - float(time_s[0])) / (time_s.size - 1)
     smooth = _centered_mean(signal, max(round(0.05 / dt), 1))
     begin = _first_rise(smooth - rest, height, dt) if live_s is None else _at(time_s, live_s)
-    window = None if begin is None else _ramp_window(smooth, begin, height, dt)
+    least = height / (3.0 if live_s is None else 6.0)
+    window = None if begin is None else _ramp_window(smooth, begin, least, dt)
     if window is None:
         return None
     hinge = _straightest_fit(way_m, signal, window, dt)
@@ -183,13 +185,13 @@ class _Window:
     height: float
 
 
-def _ramp_window(smooth: FloatArray, begin: int, height: float, dt: float) -> _Window | None:
+def _ramp_window(smooth: FloatArray, begin: int, least: float, dt: float) -> _Window | None:
     """Return the samples to fit, level and first ramp but not its top; None without a ramp."""
     span = max(round(LEVEL_S / dt), 4)
     level = float(np.median(smooth[max(begin - span, 0) : begin + 1]))
     end = _ramp_end(smooth, begin, dt)
     risen = float(smooth[end]) - level
-    if risen < height / 3.0:
+    if risen < least:
         return None
     climb = smooth[begin : end + 1] - level
     tops = tuple(begin + int(np.argmax(climb >= share * risen)) for share in RAMP_SHARES)
