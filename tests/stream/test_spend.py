@@ -12,8 +12,6 @@ from scipy.integrate import simpson
 from steady import NAN, bare_car, estimates, steady
 from streams import Drive, oval_file
 
-from canticle_adapters.json_datagram import JsonAdapter
-from canticle_adapters.rehearsal.telemetry import Options, Rehearsal
 from canticle_daemon.frame import Frame, FrameBlock
 from canticle_daemon.messages import Corner, Entry, LapCompleted
 from canticle_daemon.physics.car import CarFile
@@ -139,45 +137,3 @@ def test_times_and_energy_of_an_entry_do_not_hang_on_the_rate(rate: float) -> No
         assert entry.entry_speed_mps == pytest.approx(60.0)
     for corner in corners[1:]:
         assert corner.corner_time_s == pytest.approx(700.0 / 60.0, abs=1e-6)
-
-
-# --- slips that the stream tells ---------------------------------------------------------------
-
-
-def test_told_slips_give_the_slip_speed() -> None:
-    """A tread that slides sideways and lengthwise at known speeds: force times their length."""
-    speed, lateral, length = 60.0, np.array([1.0, 2.0, 3.0, 4.0]), np.array([0.0, 0.0, 1.5, -2.0])
-    along = np.sqrt(speed**2 - lateral**2)  # of the wheel, in its own plane
-    slips = {
-        "wheel_slip_angle_rad": tuple(np.arctan2(lateral, along).tolist()),
-        "wheel_slip_ratio": tuple((length / along).tolist()),
-    }
-    found = estimates(steady(speed, 250.0, 20.0, **slips))
-    expected = found.force_n * np.hypot(lateral, length)[:, None]
-    assert_allclose(found.sliding_power_w, expected, rtol=1e-9)
-
-
-def test_half_told_slips_are_left_to_the_tire_model() -> None:
-    plain = estimates(steady(60.0, 250.0, 20.0))
-    for told in ({"wheel_slip_ratio": (0.1,) * 4}, {"wheel_slip_angle_rad": (0.1,) * 4}):
-        found = estimates(steady(60.0, 250.0, 20.0, **told))
-        assert_allclose(found.sliding_power_w, plain.sliding_power_w)
-
-
-@pytest.mark.parametrize(("told", "share"), [(True, 0.03), (False, 0.1)])
-def test_the_account_against_the_synthetic_car_s_own(told: bool, share: float) -> None:
-    """Each tire's energy of two laps; the car integrates its own tires' forces and slips."""
-    rehearsal, adapter = Rehearsal(Options(laps=2, seed=5, noise=False)), JsonAdapter()
-    frames, power = [], []
-    for datagram, truth in rehearsal.datagrams():
-        frame = adapter.decode(datagram)
-        assert frame is not None
-        if not told:
-            frame = msgspec.structs.replace(frame, wheel_slip_ratio=None, wheel_load_n=None)
-        frames.append(frame)
-        power.append(truth["sliding_power_w"])
-    found = Pipeline(None, CarFile()).process(FrameBlock.from_frames(frames)).estimates
-    assert found is not None
-    true = np.trapezoid(np.array(power), found.time_s, axis=0)
-    mine = np.trapezoid(found.sliding_power_w, found.time_s, axis=1)
-    assert_allclose(mine, true, rtol=share)

@@ -171,28 +171,6 @@ def sliding_power_w(
     return power
 
 
-def slip_speed_mps(speed_mps: Values, slip_angle_rad: Values, slip_ratio: Values) -> FloatArray:
-    """Return how fast a tire's tread slides over the road, from slips that are known.
-
-    Parameters
-    ----------
-    speed_mps
-        Speed of the wheel over the road, whatever its direction.
-    slip_angle_rad
-        Slip angle.
-    slip_ratio
-        Longitudinal slip over the speed along the wheel's plane.
-
-    Returns
-    -------
-    array
-        v·√((κ·cos α)² + sin² α), not negative while driving forward; their signs do not count.
-    """
-    along = np.asarray(slip_ratio) * np.cos(slip_angle_rad)
-    slide: FloatArray = speed_mps * np.hypot(along, np.sin(slip_angle_rad))
-    return slide
-
-
 def friction_exponent(utilization: Values) -> FloatArray:
     """Return the local exponent with which force grows with friction at a given slip.
 

@@ -1,9 +1,7 @@
 """Spend: sliding power and energy of each tire.
 
-The power is force times slip speed. The slip is the stream's own where it tells both slip angle
-and slip ratio, else what the brush model's closed inverse says the force needs; the first is
-free of the noise that the second makes of a noisy force. Either is a proxy in joules, comparable
-lap to lap of one stream; it is not millimeters of tread.
+The power is force times slip speed, the slip by the brush model's closed inverse. It is a
+proxy in joules, comparable lap to lap; it is not millimeters of tread.
 """
 
 from __future__ import annotations
@@ -14,7 +12,7 @@ import numpy as np
 
 from canticle_daemon.frame import BoolArray, FloatArray, FrameBlock
 from canticle_daemon.physics.car import CarFile
-from canticle_daemon.physics.tire import sliding_power_w, slip_speed_mps
+from canticle_daemon.physics.tire import sliding_power_w
 from canticle_daemon.stream.demand import MIN_SPEED_MPS, Demand
 from canticle_daemon.stream.filters import RunningSum
 
@@ -57,13 +55,6 @@ class SpendStage:
         power = sliding_power_w(
             demand.force_n, demand.load_n, block.speed_mps, self._tire, demand.friction
         )
-        if any(frame.wheel_slip_ratio is not None for frame in block.frames):
-            slide = slip_speed_mps(
-                block.speed_mps,
-                block.wheels("wheel_slip_angle_rad"),
-                block.wheels("wheel_slip_ratio"),
-            )
-            power = np.where(np.isfinite(slide), demand.force_n * slide, power)
         known = np.where(np.isfinite(power), power, 0.0)
         before = np.concatenate([self._last_w, known[:, :-1]], axis=1)
         self._last_w = known[:, -1:].copy()
