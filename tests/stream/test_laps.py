@@ -194,3 +194,14 @@ def test_lap_energy_is_the_account_at_the_line_and_starts_again() -> None:
         assert (energy[:, last + 1] < 0.01 * energy[:, last]).all()
         assert np.all(np.diff(energy[:, lap == event.lap]) >= 0.0)
         assert event.peak_demand == np.nanmax(outputs.estimates.demand[lap == event.lap])
+
+
+def test_a_station_before_the_line_is_the_end_of_the_lap_before() -> None:
+    track = Track(oval_file())
+    frames = [f for f in Drive(track, laps=2).frames() if f.lap == 1][-200:]
+    counted = changed(frames, lap=NAN)
+    before = [msgspec.structs.replace(f, station_m=f.station_m - LENGTH) for f in counted]
+    there, here = run(track, before).estimates, run(track, counted).estimates
+    assert there is not None and here is not None  # noqa: PT018
+    assert_allclose(there.station_m, here.station_m, atol=1e-9)
+    assert_allclose(there.demand, here.demand)

@@ -273,6 +273,42 @@ def test_a_caution_is_a_context_and_still_judged() -> None:
     assert entries[(3, "North")].context == "free"
 
 
+def test_a_pit_road_is_a_context() -> None:
+    track = Track(oval_file())
+    told = [
+        msgspec.structs.replace(f, on_pit_road=f.lap == 2, caution=f.lap == 2)
+        for f in Drive(track, laps=3).frames()
+    ]
+    entries = {(e.lap, e.corner): e for e in run(track, told) if isinstance(e, Entry)}
+    assert entries[(2, "South")].context == "pit"
+    assert entries[(3, "North")].context == "free"
+
+
+def parked(frames: list[Frame], at: int, seconds: float) -> list[Frame]:
+    """The same drive with a long stop, told four times a second."""
+    here = frames[at]
+    still = [
+        msgspec.structs.replace(here, time_s=here.time_s + i / 4, speed_mps=0.0, yaw_rate_radps=0.0)
+        for i in range(1, int(4 * seconds))
+    ]
+    return in_a_row([frames[: at + 1], still, frames[at + 1 :]])
+
+
+@pytest.mark.parametrize("station", [120.0, 200.0, 400.0], ids=["zone", "entry", "transition"])
+@pytest.mark.parametrize("sizes", [[1], [7, 300], [5000]], ids=str)
+def test_a_car_that_parks_in_a_corner_gives_it_up(station: float, sizes: list[int]) -> None:
+    track = Track(oval_file())
+    frames = Drive(track, laps=4, rate_hz=30.0).frames()
+    at = next(i for i, f in enumerate(frames) if f.lap == 2 and f.station_m > station)
+    pipeline = Pipeline(track, CarFile())
+    stopped = parked(frames, at, 130.0)
+    events = [e for block in cut(stopped, sizes) for e in pipeline.process(block).events]
+    entries = [(e.lap, e.corner) for e in events if isinstance(e, Entry | Corner)]
+    assert (2, "North") not in entries
+    assert entries.count((2, "South")) == 2
+    assert entries.count((3, "North")) == 2
+
+
 @pytest.mark.parametrize("cornerless", [True, False], ids=["no corner in the file", "no track"])
 def test_without_corners_the_rest_still_works(cornerless: bool) -> None:
     track = Track(oval_file())

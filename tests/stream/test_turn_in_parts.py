@@ -235,3 +235,10 @@ def test_a_flick_that_does_not_last_is_no_turn_in() -> None:
 def test_a_few_frames_are_no_entry(count: int) -> None:
     time, way, signal = (column[180 : 180 + count] for column in entry())
     assert refined((time, way, signal)) is None
+
+
+def test_a_ramp_without_a_level_before_it_is_not_dated() -> None:
+    """At 10 frames a second the ramp fills the two frames that were seen before its top."""
+    time = np.arange(10.0) / 10.0
+    signal = np.array([0.0, 0.2, *[0.4] * 8])
+    assert refined_knot(time, 60.0 * time, signal, 0.0, 0.4, live_s=0.1) is None

@@ -184,9 +184,10 @@ class CornerStage:
         begin = 0
         # The detector's settings change only where a gate is passed, so cut there.
         for stop in [*_changes(part, self._part), len(block)]:
-            if stop > begin:
-                events.extend(self._stretch(view, slice(begin, stop)))
-                begin = stop
+            while stop > begin:
+                end = self._until_parked(block.time_s[begin:stop]) + begin
+                events.extend(self._stretch(view, slice(begin, end)))
+                begin = end
             if stop < len(block):
                 events.extend(self._pass_gates(view, stop))
         return events
@@ -201,7 +202,8 @@ class CornerStage:
             self._driver.rests_rad[ahead], self._driver.slope_radps,
         )  # fmt: skip
         self._trace.add(view.rows(span))
-        self._end_parked(float(time[0]))
+        if self._pass is None:
+            self._trace.forget(MEMORY_S)
         part = Part(int(view.part[span.start]) % 4)
         if part in (Part.APPROACH, Part.ENTRY):
             found = self._look(view, ramps, span)
@@ -214,11 +216,17 @@ class CornerStage:
         last = span.stop - 1
         self._last, self._part = view.at(last), int(view.part[last])
 
-    def _end_parked(self, time_s: float) -> None:
-        if self._pass is not None and time_s > self._pass.since_s + LONGEST_PASS_S:
-            self._pass = None
-        if self._pass is None:
-            self._trace.forget(MEMORY_S)
+    def _until_parked(self, time_s: FloatArray) -> int:
+        """Return after how many frames the car has been in one corner for too long.
+
+        Where it has been so already, the pass under way is dropped.
+        """
+        here = self._pass
+        if here is not None and time_s[0] > here.since_s + LONGEST_PASS_S:
+            here = self._pass = None
+        if here is None:
+            return time_s.size
+        return int(np.searchsorted(time_s, here.since_s + LONGEST_PASS_S, side="right"))
 
     def _look(self, view: _View, ramps: Ramps, span: slice) -> TurnIn | None:
         """Find the first frame at which a turn-in is certain enough."""

@@ -210,10 +210,9 @@ class Pipeline:
         self._spend.reset()
         self._laps.reset()
 
-    def _held(self, count: int) -> Estimates | None:
+    def _held(self, count: int) -> Estimates:
         """Repeat the last estimate for frames that brought nothing new."""
-        if self._last is None:
-            return None
+        assert self._last is not None  # only what follows a frame can be stale
         return self._last.take(np.full(count, -1))
 
     def _expanded(self, parts: list[Estimates], kept: IntArray, count: int) -> Estimates:
