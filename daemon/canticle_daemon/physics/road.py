@@ -249,13 +249,9 @@ def normal_specific_force(
     heading and the slope of the surface along the path are taken as small against the axis.
     """
     rise = surface_rise_mps2(
-        roll_rad,
-        roll_rate_radps,
-        roll_acceleration_radps2,
-        offset_m,
-        offset_rate_mps,
-        offset_acceleration_mps2,
-    )
+        roll_rad, roll_rate_radps, roll_acceleration_radps2,
+        offset_m, offset_rate_mps, offset_acceleration_mps2,
+    )  # fmt: skip
     upward = GRAVITY_MPS2 + rise + vertical_acceleration_mps2
     inward = speed_mps * np.asarray(heading_rate_radps)
     force: FloatArray = np.cos(roll_rad) * upward - np.sin(roll_rad) * inward
@@ -290,13 +286,9 @@ def lateral_specific_force(
         f_y = sin φ·(g + z̈) + cos φ·v·ψ̇.
     """
     rise = surface_rise_mps2(
-        roll_rad,
-        roll_rate_radps,
-        roll_acceleration_radps2,
-        offset_m,
-        offset_rate_mps,
-        offset_acceleration_mps2,
-    )
+        roll_rad, roll_rate_radps, roll_acceleration_radps2,
+        offset_m, offset_rate_mps, offset_acceleration_mps2,
+    )  # fmt: skip
     upward = GRAVITY_MPS2 + rise + vertical_acceleration_mps2
     inward = speed_mps * np.asarray(heading_rate_radps)
     force: FloatArray = np.sin(roll_rad) * upward + np.cos(roll_rad) * inward
