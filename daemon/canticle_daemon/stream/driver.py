@@ -14,7 +14,7 @@ import numpy as np
 
 from canticle_daemon.frame import FloatArray
 from canticle_daemon.physics.car import CarFile
-from canticle_daemon.physics.road import GRAVITY_MPS2
+from canticle_daemon.physics.road import neutral_speed_mps
 from canticle_daemon.stream.knots import Knot
 from canticle_daemon.stream.passes import Pass
 from canticle_daemon.stream.steering import corner_curvature
@@ -224,10 +224,9 @@ class CalmWindows:
 
 def _neutral_speed_mps(track: Track, corner: CornerPlan) -> float:
     """Return the speed at which the corner's bank alone would carry a car, with a least."""
-    bank = float(track.bank_rad(np.array([corner.apex_m]))[0])
+    bank = max(float(track.bank_rad(np.array([corner.apex_m]))[0]), 0.0)
     radius = 1.0 / corner_curvature(track, corner)
-    square = GRAVITY_MPS2 * radius * max(math.tan(bank), 0.0)
-    return max(math.sqrt(square), LEAST_SPEED_MPS)
+    return max(float(neutral_speed_mps(radius, bank)), LEAST_SPEED_MPS)
 
 
 def _median(values: deque[float], default: float) -> float:
